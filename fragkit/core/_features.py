@@ -77,7 +77,9 @@ def evaluate_features(occupations: NDArray[np.integer]) -> Array:
     return np.concatenate([opposite, same, alpha + beta], axis=1)
 
 
-def evaluate_polynomial(occupations: NDArray[np.integer], opposite_spin: Array, same_spin: Array, linear: Array) -> Array:
+def evaluate_polynomial(
+    occupations: NDArray[np.integer], opposite_spin: Array, same_spin: Array, linear: Array
+) -> Array:
     """Value of one fragment for each row of occupations (shots, 2n), without forming the features.
 
     >>> evaluate_polynomial(np.array([[1, 0, 1, 1]]), np.eye(2), np.zeros((2, 2)), np.array([1., 10.]))

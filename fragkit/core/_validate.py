@@ -13,15 +13,14 @@ from fragkit.core._errors import InputError
 def as_real_array(value: Any, name: str, shape: tuple[int | None, ...]) -> NDArray[np.float64]:
     """Return `value` as a new finite float64 array of the given shape (None matches any length)."""
     try:
-        array = np.asarray(value)
+        array: NDArray[Any] = np.asarray(value)
         if np.iscomplexobj(array):
-            largest = float(np.max(np.abs(array.imag), initial=0.0))
+            largest = float(np.max(np.abs(np.imag(array)), initial=0.0))
             if largest > 0.0:
                 raise InputError(
-                    f"`{name}` must be real (got an imaginary part up to {largest:.3g}); "
-                    "choose real orbitals first"
+                    f"`{name}` must be real (got an imaginary part up to {largest:.3g}); choose real orbitals first"
                 )
-            array = array.real
+            array = np.real(array)
         array = np.array(array, dtype=np.float64)
     except (TypeError, ValueError) as error:
         if isinstance(error, InputError):
