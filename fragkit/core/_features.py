@@ -65,7 +65,7 @@ def evaluate_features(occupations: NDArray[np.integer]) -> Array:
     """Values of all features for each row of occupations (shots, 2n), as (shots, n² + n).
 
     >>> evaluate_features(np.array([[1, 0, 1, 1]], dtype=np.uint8))
-    array([[1., 1., 0., 0., 2., 1.]])
+    array([[1., 1., 0., 1., 2., 1.]])
     """
     n = occupations.shape[1] // 2
     alpha = occupations[:, :n].astype(np.float64)
