@@ -1,0 +1,7 @@
+"""From a Hamiltonian to fragments: the verb `fragment` and its strategies."""
+
+from fragkit.fit._controls import Controls as Controls
+from fragkit.fit._fit import Fit as Fit
+from fragkit.fit._fit import Strategy as Strategy
+from fragkit.fit._low_rank import LowRank as LowRank
+from fragkit.fit._verb import fragment as fragment
