@@ -1,0 +1,16 @@
+"""Sphinx settings."""
+
+from importlib.metadata import version as installed_version
+
+project = "fragkit"
+author = "The fragkit developers"
+release = installed_version("fragkit")
+extensions = ["myst_nb", "sphinx.ext.autodoc", "sphinx.ext.napoleon"]
+myst_enable_extensions = ["dollarmath", "amsmath"]
+myst_heading_anchors = 3
+# Pages show computed numbers with their machine and date; nothing is run while the pages are built.
+nb_execution_mode = "off"
+autodoc_typehints = "description"
+html_theme = "furo"
+html_title = "fragkit"
+exclude_patterns = ["_build"]

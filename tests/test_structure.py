@@ -1,0 +1,68 @@
+"""The direction of imports between rooms, and the names and weight of the top level."""
+
+import ast
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+
+import fragkit
+
+PACKAGE = Path(fragkit.__file__).parent
+MAY_IMPORT = {
+    "core": set(),
+    "readers": {"core"},
+    "fit": {"core"},
+    "states": {"core"},
+    "circuits": {"core"},
+    "pauli": {"core", "states"},
+    "planning": {"core", "fit", "states"},
+    "estimate": {"core", "planning", "circuits", "states"},
+    "report": {"core", "readers", "fit", "states", "circuits", "pauli", "planning", "estimate"},
+    "files": {"core", "readers", "fit", "states", "circuits", "pauli", "planning", "estimate"},
+}
+# Methods of Plan forward to upper rooms, and import them in the method's body.
+FORWARDING = {"planning/_plan.py"}
+
+
+def imported_rooms(tree: ast.AST) -> set[str]:
+    names = []
+    for node in ast.walk(tree):
+        if isinstance(node, ast.ImportFrom) and node.module:
+            names.append(node.module)
+        elif isinstance(node, ast.Import):
+            names += [alias.name for alias in node.names]
+    return {name.split(".")[1] for name in names if name.startswith("fragkit.") and name.count(".") >= 1}
+
+
+@pytest.mark.parametrize("room", sorted(MAY_IMPORT))
+def test_lower_rooms_never_import_upper_ones(room: str) -> None:
+    files = sorted((PACKAGE / room).glob("*.py"))
+    assert files, f"room {room} has no files"
+    for path in files:
+        if f"{room}/{path.name}" in FORWARDING:
+            continue
+        wrong = imported_rooms(ast.parse(path.read_text())) - MAY_IMPORT[room] - {room}
+        assert not wrong, f"{room}/{path.name} imports {sorted(wrong)}"
+
+
+def test_every_public_name_resolves_and_is_declared_to_type_checkers() -> None:
+    tree = ast.parse((PACKAGE / "__init__.py").read_text())
+    guarded = next(node for node in tree.body if isinstance(node, ast.If))
+    declared = {alias.asname for node in ast.walk(guarded) if isinstance(node, ast.ImportFrom) for alias in node.names}
+    assert declared == set(fragkit.__all__)
+    for name in fragkit.__all__:
+        assert getattr(fragkit, name) is not None
+
+
+def test_import_leaves_heavy_packages_alone() -> None:
+    heavy = ["jax", "openfermion", "pyscf", "matplotlib", "clarabel", "cirq", "qiskit", "scipy"]
+    code = f"import fragkit, sys; print([name for name in {heavy} if name in sys.modules])"
+    shown = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True).stdout.strip()
+    assert shown == "[]"
+
+
+def test_unknown_name_is_an_attribute_error() -> None:
+    with pytest.raises(AttributeError, match="no attribute 'nonsense'"):
+        _ = fragkit.nonsense
