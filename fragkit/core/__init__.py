@@ -1,5 +1,7 @@
 """Data of the package: Hamiltonians, fragments, and the tensor operations they share."""
 
+from fragkit.core._atomic import as_path as as_path
+from fragkit.core._atomic import write_atomically as write_atomically
 from fragkit.core._errors import FragkitError as FragkitError
 from fragkit.core._errors import InputError as InputError
 from fragkit.core._errors import MismatchError as MismatchError
