@@ -40,7 +40,7 @@ def sector_shifts(space: OperatorSpace, electrons: tuple[int, int]) -> Shifts:
     """All shifts that features with equal coefficients for both spins can represent.
 
     They are combinations of (N̂_σ − N_σ) X_τ with a one-body X, and of N̂_σ − N_σ. Linear features are spin-summed, so
-    only combinations whose one-body part is the same for both spins count. With X_σ = Σ_pq x_pq a†_pσ a_qσ, symmetric x:
+    those count whose one-body part is the same for both spins. With X_σ = Σ_pq x_pq a†_pσ a_qσ, symmetric x:
 
     - N_α = N_β: (N̂_α − N_α) X_β + (N̂_β − N_β) X_α and Σ_σ (N̂_σ − N_σ) Y_σ, x and y independent;
     - N_α ≠ N_β: their one-body parts differ between the spins by (N_α − N_β)(x − y), so x = y, (N̂ − N) X; and the
@@ -65,13 +65,13 @@ def sector_shifts(space: OperatorSpace, electrons: tuple[int, int]) -> Shifts:
         values.append(value)
 
     add(zero_pairs, zero_pairs, np.eye(n), float(alpha + beta))
-    add(np.outer(trace, trace), zero_pairs, zero_one, float(alpha * beta))
+    add(trace[:, None] * trace, zero_pairs, zero_one, float(alpha * beta))
     for k in range(size):
         x = np.zeros((n, n))
         x[p[k], q[k]] = x[q[k], p[k]] = 1.0
         packed = np.zeros(size)
         packed[k] = weights[k]
-        product = np.outer(trace, packed) + np.outer(packed, trace)
+        product = trace[:, None] * packed + packed[:, None] * trace
         if alpha == beta:
             add(product, zero_pairs, -alpha * x, 0.0)
             add(zero_pairs, product, (1 - alpha) * x, 0.0)
