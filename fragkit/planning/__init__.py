@@ -1,0 +1,5 @@
+"""Measurement plans: coefficients, rotations and shots."""
+
+from fragkit.planning._plan import CHEMICAL_ACCURACY as CHEMICAL_ACCURACY
+from fragkit.planning._plan import Plan as Plan
+from fragkit.planning._plan import PlanBound as PlanBound
