@@ -2,6 +2,9 @@
 
 from fragkit.core._atomic import as_path as as_path
 from fragkit.core._atomic import write_atomically as write_atomically
+from fragkit.core._elimination import eliminate as eliminate
+from fragkit.core._elimination import mesh_matrix as mesh_matrix
+from fragkit.core._elimination import mesh_positions as mesh_positions
 from fragkit.core._errors import FragkitError as FragkitError
 from fragkit.core._errors import InputError as InputError
 from fragkit.core._errors import MismatchError as MismatchError
@@ -21,6 +24,9 @@ from fragkit.core._operator_tensors import OperatorTensors as OperatorTensors
 from fragkit.core._operator_tensors import energy_bound as energy_bound
 from fragkit.core._operator_tensors import fragment_tensors as fragment_tensors
 from fragkit.core._operator_tensors import residual_norm as residual_norm
+from fragkit.core._ordering import best_column_order as best_column_order
+from fragkit.core._ordering import cheapest_order as cheapest_order
+from fragkit.core._ordering import givens_count as givens_count
 from fragkit.core._tensors import factorise_two_body as factorise_two_body
 from fragkit.core._tensors import pack_pairs as pack_pairs
 from fragkit.core._tensors import pivoted_cholesky as pivoted_cholesky
@@ -29,6 +35,8 @@ from fragkit.core._tensors import rotate_two_body as rotate_two_body
 from fragkit.core._tensors import symmetrise_two_body as symmetrise_two_body
 from fragkit.core._tensors import symmetry_violation as symmetry_violation
 from fragkit.core._tensors import unpack_pairs as unpack_pairs
+from fragkit.core._time_model import TWO_QUBIT_GATES_PER_GIVENS as TWO_QUBIT_GATES_PER_GIVENS
+from fragkit.core._time_model import TimeModel as TimeModel
 from fragkit.core._validate import as_count as as_count
 from fragkit.core._validate import as_electrons as as_electrons
 from fragkit.core._validate import as_positive as as_positive
