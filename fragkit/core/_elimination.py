@@ -39,7 +39,7 @@ def mesh_positions(size: int) -> tuple[int, ...]:
     """Left neighbour i of every rotation M(i, θ) of the full mesh in the order of the circuit, size(size−1)/2 entries.
 
     >>> mesh_positions(4)
-    (0, 1, 2, 2, 1, 0)
+    (1, 2, 0, 1, 2, 0)
     """
     rows, columns = _elimination_steps(size)
     return tuple(i for i, _ in rows) + tuple(i for _, i in reversed(columns))
