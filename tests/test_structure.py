@@ -22,8 +22,8 @@ MAY_IMPORT = {
     "report": {"core", "readers", "fit", "states", "circuits", "pauli", "planning", "estimate"},
     "files": {"core", "readers", "fit", "states", "circuits", "pauli", "planning", "estimate"},
 }
-# Methods of Plan forward to upper rooms, and import them in the method's body.
-FORWARDING = {"planning/_plan.py"}
+# Methods of Plan, Counts and Estimate forward to upper rooms, and import them in the method's body.
+FORWARDING = {"planning/_plan.py", "estimate/_counts.py", "estimate/_estimate.py"}
 
 
 def imported_rooms(tree: ast.AST) -> set[str]:

@@ -1,5 +1,9 @@
 """Tables, notebook views and figures."""
 
+from fragkit.report._estimate import estimate_html as estimate_html
+from fragkit.report._estimate import estimate_summary as estimate_summary
+from fragkit.report._estimate import estimate_table as estimate_table
+from fragkit.report._estimate import plot_estimate as plot_estimate
 from fragkit.report._plan import plan_html as plan_html
 from fragkit.report._plan import plan_summary as plan_summary
 from fragkit.report._plan import plan_table as plan_table
