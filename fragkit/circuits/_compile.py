@@ -10,6 +10,7 @@ from fragkit.circuits._circuit import Givens, Layers, Layout, line_places
 from fragkit.core import best_column_order, eliminate, mesh_matrix, mesh_positions
 
 Array = NDArray[np.float64]
+Order = NDArray[np.intp]
 Readout = Literal["fixed", "free"]
 
 
@@ -17,7 +18,7 @@ Readout = Literal["fixed", "free"]
 class LineAngles:
     """Angles at every position of the full mesh on the line, zero where no gate is needed.
 
-    `positions` and `angles` are those of both registers (blocked) or of the line of 2n places (interleaved);
+    Blocked: the mesh of each spin register, alpha first. Interleaved: the mesh of the line of 2n places.
     `readout` and `signs` are as in `RotationCircuit`.
     """
 
@@ -27,8 +28,23 @@ class LineAngles:
     signs: Array
 
 
-def line_angles(rotation: Array, layout: Layout, readout: Readout, tolerance: float) -> LineAngles:
-    """Compile a rotation (n, n) for a layout.
+def readout_order(rotation: Array, layout: Layout, readout: Readout, tolerance: float) -> Order:
+    """New spin-orbital (blocked order) that ends on each place of the line, shape (2n,)."""
+    n = len(rotation)
+    in_place = np.argsort(line_places(n, layout))
+    if readout == "fixed":
+        return in_place
+    spatial = best_column_order(rotation, tolerance=tolerance)
+    side_by_side = np.concatenate([spatial, n + spatial])
+    if layout == "blocked":
+        return side_by_side
+    in_turn = np.stack([spatial, n + spatial], axis=1).ravel()
+    candidates = [in_place.tolist(), side_by_side.tolist(), in_turn.tolist()]
+    return best_column_order(_line_matrix(rotation), tolerance=tolerance, candidates=candidates)
+
+
+def line_angles(rotation: Array, layout: Layout, order: Order, tolerance: float) -> LineAngles:
+    """Compile a rotation (n, n) for a layout and an order of readout.
 
     Blocked: each spin register is a line of its own, so no gate has a Jordan-Wigner string.
 
@@ -38,36 +54,25 @@ def line_angles(rotation: Array, layout: Layout, readout: Readout, tolerance: fl
     for the order of readout.
     """
     n = len(rotation)
+    place_of = np.argsort(order)
     if layout == "blocked":
-        order = best_column_order(rotation, tolerance=tolerance) if readout == "free" else np.arange(n)
-        angles, signs = eliminate(rotation[:, order], tolerance=tolerance)
+        angles, signs = eliminate(rotation[:, order[:n]], tolerance=tolerance)
+        angles, signs = np.concatenate([angles, angles]), np.concatenate([signs, signs])
         places = mesh_positions(n)
-        place_of = np.argsort(order)
-        return LineAngles(
-            positions=(*places, *(n + i for i in places)),
-            angles=np.concatenate([angles, angles]),
-            readout=tuple(int(p) for p in (*place_of, *(n + place_of))),
-            signs=np.concatenate([signs[place_of], signs[place_of]]),
-        )
+        places = (*places, *(n + i for i in places))
+    else:
+        angles, signs = eliminate(_line_matrix(rotation)[:, order], tolerance=tolerance)
+        places = mesh_positions(2 * n)
+    return LineAngles(places, angles, tuple(int(p) for p in place_of), signs[place_of])
+
+
+def _line_matrix(rotation: Array) -> Array:
+    """Rotation of the spin-orbitals (2n, 2n): rows are places of the interleaved line, columns in blocked order."""
+    n = len(rotation)
     line = np.zeros((2 * n, 2 * n))
     line[0::2, :n] = rotation
     line[1::2, n:] = rotation
-    interleaved = np.array([p + spin * n for p in range(n) for spin in (0, 1)])
-    order = interleaved
-    if readout == "free":
-        # The best order of one spin alone, side by side and one spin after the other.
-        spatial = best_column_order(rotation, tolerance=tolerance)
-        candidates = [interleaved, np.concatenate([spatial, n + spatial])]
-        candidates.append(np.stack([spatial, n + spatial], axis=1).ravel())
-        order = best_column_order(line, tolerance=tolerance, candidates=[c.tolist() for c in candidates])
-    angles, signs = eliminate(line[:, order], tolerance=tolerance)
-    place_of = np.argsort(order)
-    return LineAngles(
-        positions=mesh_positions(2 * n),
-        angles=angles,
-        readout=tuple(int(p) for p in place_of),
-        signs=signs[place_of],
-    )
+    return line
 
 
 def earliest_layers(positions: "tuple[int, ...]", angles: Array, size: int) -> Layers:

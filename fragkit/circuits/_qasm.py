@@ -2,8 +2,10 @@
 
 The gate `givens` uses gates of the standard libraries only. With S on the second qubit X⊗X + Y⊗Y becomes
 X⊗Y − Y⊗X; a quarter turn about x makes Y⊗Y into Z⊗Z, and a CNOT makes X⊗X and Z⊗Z into X⊗1 and 1⊗Z. So two CNOT are
-enough, which is the least for a rotation of two occupations.
+enough.
 """
+
+from collections.abc import Iterable, Sequence
 
 from fragkit.circuits._circuit import RotationCircuit
 from fragkit.core import InputError
@@ -37,27 +39,20 @@ def openqasm3(circuit: RotationCircuit, *, preparation: str = "", measure: bool 
     --------
     >>> import numpy as np
     >>> from fragkit.circuits import rotation_circuits
-    >>> print(rotation_circuits([np.eye(1)])[0].to_openqasm3())  # doctest: +ELLIPSIS
+    >>> print(rotation_circuits([np.eye(2)])[0].to_openqasm3())  # doctest: +ELLIPSIS
     OPENQASM 3.0;
     include "stdgates.inc";
     // Readout of the occupations of rotated orbitals. Written by fragkit ...
-    // Jordan-Wigner, blocked layout; c[j] is the occupation of new spin-orbital j, alpha 0 ... 0, then beta.
-    qubit[2] q;
-    bit[2] c;
+    // Jordan-Wigner, blocked layout. c[0] ... c[1] are the new alpha orbitals, c[2] ... c[3] the new beta orbitals.
+    qubit[4] q;
+    bit[4] c;
     c[0] = measure q[0];
     c[1] = measure q[1];
+    c[2] = measure q[2];
+    c[3] = measure q[3];
     <BLANKLINE>
     """
-    lines = ["OPENQASM 3.0;", 'include "stdgates.inc";', *header(circuit)]
-    if circuit.givens:
-        lines.append(f"gate givens(theta) a, b {{ {GIVENS_BODY} }}")
-    lines += [f"qubit[{register_size(circuit)}] q;"]
-    lines += [f"bit[{circuit.qubit_count}] c;"] if measure else []
-    lines += _inserted(preparation)
-    lines += [f"givens({theta!r}) q[{a}], q[{b}];" for a, b, theta in circuit.gates()]
-    if measure:
-        lines += [f"c[{j}] = measure q[{q}];" for j, q in enumerate(circuit.measured_qubits)]
-    return "\n".join(lines) + "\n"
+    return _one_circuit(circuit, 3, preparation, measure)
 
 
 def openqasm2(circuit: RotationCircuit, *, preparation: str = "", measure: bool = True) -> str:
@@ -65,34 +60,65 @@ def openqasm2(circuit: RotationCircuit, *, preparation: str = "", measure: bool 
 
     Cross, Bishop, Smolin & Gambetta, arXiv:1707.03429 (2017).
     """
-    lines = ["OPENQASM 2.0;", 'include "qelib1.inc";', *header(circuit)]
-    if circuit.givens:
-        lines.append(f"gate givens(theta) a, b {{ {GIVENS_BODY} }}")
-    lines += [f"qreg q[{register_size(circuit)}];"]
-    lines += [f"creg c[{circuit.qubit_count}];"] if measure else []
-    lines += _inserted(preparation)
-    lines += [f"givens({theta!r}) q[{a}],q[{b}];" for a, b, theta in circuit.gates()]
-    if measure:
-        lines += [f"measure q[{q}] -> c[{j}];" for j, q in enumerate(circuit.measured_qubits)]
-    return "\n".join(lines) + "\n"
+    return _one_circuit(circuit, 2, preparation, measure)
 
 
-def header(circuit: RotationCircuit) -> list[str]:
-    """Comment lines: where the file comes from, what the bits are, and what was left out."""
-    from fragkit import __version__
-
-    lines = [f"// Readout of the occupations of rotated orbitals. Written by fragkit {__version__}."]
-    lines += [f"// {key}: {text}" for key, text in circuit.provenance]
-    lines.append(
-        f"// Jordan-Wigner, {circuit.layout} layout; c[j] is the occupation of new spin-orbital j, "
-        f"alpha 0 ... {circuit.orbitals - 1}, then beta."
-    )
+def _one_circuit(circuit: RotationCircuit, version: int, preparation: str, measure: bool) -> str:
+    notes = [f"{key}: {text}" for key, text in circuit.provenance]
     if circuit.dropped:
-        lines.append(
-            f"// {circuit.dropped} rotations left out (tolerance {circuit.angle_tolerance:g} rad); total variation "
+        notes.append(
+            f"{circuit.dropped} rotations left out (tolerance {circuit.angle_tolerance:g} rad); total variation "
             f"distance of the probabilities at most {circuit.distribution_bound:.3g}."
         )
-    return lines
+    return program(
+        version=version,
+        orbitals=circuit.orbitals,
+        layout=circuit.layout,
+        notes=notes,
+        gates=((a, b, repr(theta)) for a, b, theta in circuit.gates()),
+        inputs=(),
+        qubits=circuit.qubits,
+        measured=circuit.measured_qubits if measure else None,
+        preparation=preparation,
+    )
+
+
+def program(
+    *,
+    version: int,
+    orbitals: int,
+    layout: str,
+    notes: Iterable[str],
+    gates: Iterable[tuple[int, int, str]],
+    inputs: Sequence[str],
+    qubits: Sequence[int],
+    measured: Sequence[int] | None,
+    preparation: str,
+) -> str:
+    """The text of a program whose gates are (qubit, qubit, angle as text)."""
+    from fragkit import __version__
+
+    head = 'OPENQASM 3.0;\ninclude "stdgates.inc";' if version == 3 else 'OPENQASM 2.0;\ninclude "qelib1.inc";'
+    n = orbitals
+    lines = [head, f"// Readout of the occupations of rotated orbitals. Written by fragkit {__version__}."]
+    lines += [f"// {note}" for note in notes]
+    lines.append(
+        f"// Jordan-Wigner, {layout} layout. c[0] ... c[{n - 1}] are the new alpha orbitals, "
+        f"c[{n}] ... c[{2 * n - 1}] the new beta orbitals."
+    )
+    lines += [f"input float[64] {name};" for name in inputs]
+    calls = [f"givens({angle}) q[{a}], q[{b}];" for a, b, angle in gates]
+    if calls:
+        lines.append(f"gate givens(theta) a, b {{ {GIVENS_BODY} }}")
+    size = max(qubits) + 1
+    lines.append(f"qubit[{size}] q;" if version == 3 else f"qreg q[{size}];")
+    if measured is not None:
+        lines.append(f"bit[{2 * n}] c;" if version == 3 else f"creg c[{2 * n}];")
+    lines += _inserted(preparation)
+    lines += calls
+    for j, qubit in enumerate(measured or ()):
+        lines.append(f"c[{j}] = measure q[{qubit}];" if version == 3 else f"measure q[{qubit}] -> c[{j}];")
+    return "\n".join(lines) + "\n"
 
 
 def register_size(circuit: RotationCircuit) -> int:

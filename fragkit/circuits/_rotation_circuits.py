@@ -7,8 +7,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.circuits._circuit import Layout, RotationCircuit
-from fragkit.circuits._compile import LineAngles, Readout, distribution_bound, earliest_layers, line_angles
-from fragkit.core import Fragment, InputError, as_count, as_electrons, as_rotation, eliminate, frozen
+from fragkit.circuits._compile import (
+    LineAngles,
+    Order,
+    Readout,
+    distribution_bound,
+    earliest_layers,
+    line_angles,
+    readout_order,
+)
+from fragkit.core import Fragment, InputError, as_count, as_electrons, as_rotation, frozen
 
 Array = NDArray[np.float64]
 LARGEST_TOLERANCE = 0.1
@@ -104,7 +112,8 @@ def rotation_circuits(
         rotations = [prepared.T @ rotation for rotation in rotations]
     circuits = []
     for rotation, note in zip(rotations, notes, strict=True):
-        compiled = line_angles(rotation, layout, readout, tolerance)
+        order = readout_order(rotation, layout, readout, tolerance)
+        compiled = line_angles(rotation, layout, order, tolerance)
         circuit = RotationCircuit(
             rotation=frozen(np.array(rotation)),
             layout=layout,
@@ -112,7 +121,7 @@ def rotation_circuits(
             readout=compiled.readout,
             qubits=qubits,
             signs=frozen(compiled.signs),
-            dropped=_dropped(rotation, compiled, layout) if tolerance > 0.0 else 0,
+            dropped=_dropped(rotation, layout, order, compiled) if tolerance > 0.0 else 0,
             angle_tolerance=tolerance,
             distribution_bound=min(1.0, distribution_bound(rotation, layout, compiled, pair)),
             provenance=note,
@@ -123,17 +132,10 @@ def rotation_circuits(
     return circuits
 
 
-def _dropped(rotation: Array, compiled: LineAngles, layout: Layout) -> int:
+def _dropped(rotation: Array, layout: Layout, order: Order, compiled: LineAngles) -> int:
     """How many rotations the exact circuit with the same readout has more."""
-    n = len(rotation)
-    order = np.argsort(compiled.readout)
-    if layout == "blocked":
-        exact = 2 * np.count_nonzero(eliminate(rotation[:, order[:n]])[0])
-    else:
-        line = np.zeros((2 * n, 2 * n))
-        line[0::2, :n] = line[1::2, n:] = rotation
-        exact = np.count_nonzero(eliminate(line[:, order])[0])
-    return max(0, int(exact - np.count_nonzero(compiled.angles)))
+    exact = line_angles(rotation, layout, order, 0.0)
+    return max(0, int(np.count_nonzero(exact.angles) - np.count_nonzero(compiled.angles)))
 
 
 def _tolerance(value: Any) -> float:
