@@ -1,0 +1,125 @@
+"""Globally least-variance coefficients and shot shares at fixed rotations.
+
+With variance per shot V(w) = hᵀ M(w)⁻¹ h, M(w) = Σ_m w_m B_m B_mᵀ, the problem min V(w) + Σ w over w ≥ 0 is convex, and
+its solution has w_m = σ_m, the standard deviation of circuit m; Σ w is then the root of the cost (Σ σ)². A primal-dual
+interior-point iteration on the K weights solves it: with φ_m = |B_mᵀ ν|², ν = M⁻¹h,
+
+    ∂V/∂w_m = −φ_m,   ∂²V/∂w_m∂w_l = 2 g_mᵀ M⁻¹ g_l,   g_m = B_m B_mᵀ ν.
+
+This is c-optimal design with several responses (Elfving 1952; Sagnol, arXiv:0912.5467). The dual, max hᵀν with
+|B_mᵀ ν| ≤ 1, gives a lower bound for these rotations in every iteration: (hᵀν)²/max_m φ_m.
+"""
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.linalg import solve
+
+from fragkit.planning._whitened import Information, WhitenedDesign
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True, eq=False)
+class Weights:
+    """Weights of least variance: the σ_m, the dual ν in the design's working basis, cost and lower bound in Ha²."""
+
+    weights: Array
+    dual: Array
+    cost: float
+    lower_bound: float
+    converged: bool
+    iterations: int
+    information: Information
+
+
+def newton_weights(
+    design: WhitenedDesign,
+    *,
+    start: Array | None = None,
+    tolerance: float = 1e-6,
+    iterations: int = 60,
+    report: Any = None,
+) -> Weights:
+    """Interior-point weights with (cost − lower bound) ≤ tolerance × cost.
+
+    `start` is a first guess of the shares, `report(cost)` is called in every iteration.
+    """
+    count = design.count
+    weights = np.full(count, 1.0 / count) if start is None else np.maximum(start, 1e-4 / count)
+    slack: Array | None = None
+    best: Weights | None = None
+    polish = start is None
+    for iteration in range(iterations + 1):
+        information = design.information(weights)
+        dual = information.inverse(design.wanted)
+        variance = float(design.wanted @ dual)
+        if variance <= 0.0:
+            # Everything that is wanted costs nothing.
+            zero = np.zeros(count)
+            return Weights(zero, np.zeros_like(dual), 0.0, 0.0, True, iteration, information)
+        # Along a ray V/s + s Σw is least at s = √(V/Σw); this also sets the scale of the first guess.
+        scale = np.sqrt(variance / np.sum(weights))
+        weights, dual, variance = weights * scale, dual / scale, variance / scale
+        response = design.matrix.T @ dual
+        sizes = np.array([response[block] @ response[block] for block in design.blocks])
+        cost = float(weights @ np.sqrt(sizes)) ** 2
+        bound = variance**2 / float(np.max(sizes))
+        if best is None or cost < best.cost:
+            best = Weights(weights, dual, cost, bound, False, iteration, information)
+        lower = max(best.lower_bound, bound)
+        done = best.cost - lower <= tolerance * best.cost
+        best = Weights(best.weights, best.dual, best.cost, lower, done, iteration, best.information)
+        if report is not None:
+            report(best.cost)
+        if done or iteration == iterations:
+            return best
+        if polish and iteration < 2:
+            # The multiplicative update is the better step far from the solution.
+            weights = weights * np.sqrt(sizes)
+            continue
+        if slack is None:
+            slack = np.maximum(1.0 - sizes, 0.1)
+        weights, slack = _step(design, information, scale, weights, slack, sizes, response)
+    raise AssertionError  # the loop always returns
+
+
+def _step(
+    design: WhitenedDesign,
+    information: Information,
+    scale: float,
+    weights: Array,
+    slack: Array,
+    sizes: Array,
+    response: Array,
+) -> tuple[Array, Array]:
+    """One primal-dual step with Mehrotra's choice of the barrier; M⁻¹ of `information` is `scale` too large."""
+    gradients = np.stack([design.matrix[:, block] @ response[block] for block in design.blocks], axis=1)
+    halves = information.half_inverse(gradients)
+    hessian = 2.0 / scale * (halves.T @ halves)
+    system = hessian + np.diag(slack / weights)
+
+    def direction(barrier: Array) -> tuple[Array, Array]:
+        change = solve(system, sizes - 1.0 + barrier / weights, assume_a="pos", check_finite=False)
+        return change, (barrier - slack * change) / weights - slack
+
+    gap = float(weights @ slack) / len(weights)
+    change, slack_change = direction(np.zeros_like(weights))
+    length, slack_length = _longest(weights, change), _longest(slack, slack_change)
+    predicted = float((weights + length * change) @ (slack + slack_length * slack_change)) / len(weights)
+    centring = (max(predicted, 0.0) / gap) ** 3
+    change, slack_change = direction(np.full_like(weights, max(centring, 1e-6) * gap))
+    length = min(1.0, 0.98 * _longest(weights, change))
+    slack_length = min(1.0, 0.98 * _longest(slack, slack_change))
+    # V behaves like 1/w: a weight that should rise by more than a few times is better followed in several steps.
+    rise = float(np.max(change / weights))
+    length = min(length, 4.0 / rise) if rise > 4.0 else length
+    return weights + length * change, slack + slack_length * slack_change
+
+
+def _longest(values: Array, change: Array) -> float:
+    """Longest step that keeps positive values positive, at most 1 / 0.98."""
+    falling = change < 0
+    return float(min(1.0 / 0.98, np.min(-values[falling] / change[falling], initial=np.inf)))
