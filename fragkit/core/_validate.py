@@ -30,12 +30,11 @@ def as_real_array(value: Any, name: str, shape: tuple[int | None, ...]) -> NDArr
     if array.ndim != len(shape) or any(k is not None and k != got for k, got in zip(shape, array.shape, strict=True)):
         raise InputError(f"`{name}` must have shape {wanted} (got {array.shape})")
     bad = np.argwhere(~np.isfinite(array))
-    if bad.size:
+    # One row per bad entry; for a single number the rows are empty, so `bad.size` would be zero.
+    if len(bad):
         index = tuple(int(k) for k in bad[0])
-        raise InputError(
-            f"`{name}` must be finite (got {array[index]} at index {index}, {len(bad)} such entries); "
-            "check how the array was made"
-        )
+        where = f" at index {index}, {len(bad)} such entries); check how the array was made" if shape else ")"
+        raise InputError(f"`{name}` must be finite (got {array[index]}{where}")
     return array
 
 
