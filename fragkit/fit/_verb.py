@@ -6,6 +6,7 @@ from pathlib import Path
 from typing import Literal, get_args
 
 import numpy as np
+from threadpoolctl import threadpool_limits
 
 from fragkit.core import Fragment, Fragmentation, Hamiltonian, InputError
 from fragkit.fit._checkpoint import Checkpoint, CheckpointFile
@@ -106,7 +107,9 @@ def fragment(
     began = time.perf_counter()
     controls = Controls(rng=np.random.default_rng(rng), progress=progress, file=file, start=start)
     try:
-        fit = chosen.fit(hamiltonian, controls)
+        # One thread: the same numbers whatever the machine is busy with, and small products are faster so.
+        with threadpool_limits(1, user_api="blas"):
+            fit = chosen.fit(hamiltonian, controls)
         controls.update(fit.rotations, fit.coefficients, fit.residual, fit.iterations)
     except KeyboardInterrupt:
         if on_interrupt == "raise" or controls.best is None:
