@@ -1,6 +1,7 @@
 """Pure states given by a full-CI vector: rotate the vector, weight the determinants."""
 
 import hashlib
+from functools import cached_property
 from typing import Any
 
 import numpy as np
@@ -9,6 +10,8 @@ from numpy.typing import NDArray
 from fragkit.core import Hamiltonian, InputError, as_real_array
 from fragkit.states._assembly import SpinMoments, feature_moments
 from fragkit.states._base import Array, Bits, Expectations, ReferenceState, as_shots, seeded
+from fragkit.states._ci_expectations import CIExpectations
+from fragkit.states._factored import FactoredVector, factor_vector
 from fragkit.states._hamiltonian_action import energy_and_variance
 from fragkit.states._strings import compound_matrix, strings
 
@@ -94,9 +97,14 @@ class CIState(ReferenceState):
         return energy_and_variance(hamiltonian, self.vector)[1]
 
     def _expectations(self, rotations: Array, coefficients: Array) -> Expectations:
-        from fragkit.states._ci_expectations import CIExpectations
+        return CIExpectations(self._factored, self.electrons, rotations, coefficients)
 
-        return CIExpectations(self, rotations, coefficients)
+    def _batch(self) -> int:
+        return max(1, 40_000 // self.vector.size)
+
+    @cached_property
+    def _factored(self) -> FactoredVector:
+        return factor_vector(self.vector, self.orbitals, self.electrons)
 
 
 def weighted_moments(weights: NDArray[np.float64], orbitals: int, electrons: tuple[int, int]) -> tuple[Array, Array]:

@@ -3,76 +3,155 @@
 With c the vector in a rotated basis, p = c², f the fragment's value and g = (f − center)², the derivative of
 Σ p g for U → U exp(X) is 2 Σ_pq X_pq ⟨c| E_pq |g∘c⟩: rotating by exp(X) changes c by its transposed one-electron
 operator, so nothing has to be differentiated through the rotation of the vector.
+
+c is a product of thin factors, A diag(s) Bᵀ, and f is one too: f[a, b] = f_α[a] + f_β[b] + x_aᵀ Y x_b. Determinants are
+visited in blocks of alpha strings that fit in cache; for a vector that is symmetric in the spins only the blocks on
+and above the diagonal.
 """
 
-from typing import TYPE_CHECKING
+from dataclasses import dataclass
 
 import numpy as np
 
 from fragkit.core import pack_features, pair_indices, unpack_features
 from fragkit.states._base import Array, Expectations
-from fragkit.states._strings import Strings, compound_matrix, strings
+from fragkit.states._factored import FactoredVector
+from fragkit.states._strings import Strings, strings
 
-if TYPE_CHECKING:
-    from fragkit.states._ci import CIState
+_BLOCK = 50_000  # determinants in a block
+
+
+@dataclass(frozen=True, eq=False)
+class _Block:
+    start: int
+    stop: int
+    first: int  # first beta string of the block
+    vector: Array  # (K, stop − start, beta strings from `first`)
+    values: Array  # f there
+
+    @property
+    def diagonal(self) -> int:
+        """Number of leading columns whose mirror images lie in the block itself."""
+        return self.stop - self.start
 
 
 class CIExpectations(Expectations):
     """K fragments on one CI vector."""
 
-    def __init__(self, state: "CIState", rotations: Array, coefficients: Array) -> None:
-        n, (a, b) = state.orbitals, state.electrons
-        self._alpha, self._beta = strings(n, a), strings(n, b)
-        left = compound_matrix(rotations, a)
-        right = left if a == b else compound_matrix(rotations, b)
-        self._vectors = left @ state.vector @ right.swapaxes(-1, -2)
-        self._weights = self._vectors**2
+    def __init__(
+        self, factored: FactoredVector, electrons: tuple[int, int], rotations: Array, coefficients: Array
+    ) -> None:
+        n = rotations.shape[-1]
+        kind = rotations.dtype
+        alpha, beta = (strings(n, k) for k in electrons)
+        self._alpha, self._beta = alpha, beta
+        self._symmetric = factored.symmetric
+        self._left = factored.left.rotated(rotations)
+        self._right = self._left if self._symmetric else factored.right.rotated(rotations)
+        self._scale = factored.scale.astype(kind)
+
         opposite, same, linear = unpack_features(coefficients, n)
-        at_alpha = _single_spin_values(self._alpha, same, linear)
-        at_beta = _single_spin_values(self._beta, same, linear)
-        values = (self._alpha.occupations @ opposite) @ self._beta.occupations.T
-        values += at_alpha[:, :, None]
-        values += at_beta[:, None, :]
-        self._values = values
-        self.mean = np.einsum("kab,kab->k", self._weights, values)
+        single = pack_features(np.zeros_like(same), same, linear)[:, -alpha.features.shape[1] :]
+        row_values = _with_columns((alpha.occupations @ opposite), single @ alpha.features.T, None, kind)
+        column_values = _with_columns(
+            np.broadcast_to(beta.occupations, (len(rotations), *beta.occupations.shape)),
+            None,
+            single @ beta.features.T,
+            kind,
+        )
+
+        step = max(1, min(alpha.count, _BLOCK // beta.count))
+        scaled = self._left * self._scale
+        right, columns = self._right.swapaxes(1, 2), column_values.swapaxes(1, 2)
+        self._blocks = []
+        total = np.zeros(len(rotations))
+        for start in range(0, alpha.count, step):
+            stop = min(start + step, alpha.count)
+            first = start if self._symmetric else 0
+            vector = scaled[:, start:stop] @ right[:, :, first:]
+            values = row_values[:, start:stop] @ columns[:, :, first:]
+            block = _Block(start, stop, first, vector, values)
+            self._blocks.append(block)
+            total += self._weighted_dot(block, values * vector, vector)
+        self.mean = total
+
+    def _weighted_dot(self, block: _Block, x: Array, y: Array) -> Array:
+        """Σ x y over the block and its mirror image."""
+        whole = np.vecdot(x.reshape(len(x), -1), y.reshape(len(y), -1)).astype(np.float64)
+        if not self._symmetric or block.diagonal == x.shape[2]:
+            return whole
+        d = block.diagonal
+        return 2.0 * whole - np.vecdot(x[:, :, :d], y[:, :, :d]).sum(axis=1)
 
     def about(self, center: Array) -> tuple[Array, Array, Array]:
         """See `Expectations.about`."""
-        alpha, beta = self._alpha, self._beta
-        n = alpha.orbitals
-        deviation = self._values - center[:, None, None]
-        weighted = self._weights * deviation
-        second = np.einsum("kab,kab->k", weighted, deviation)
+        alpha, beta, symmetric = self._alpha, self._beta, self._symmetric
+        count, n = len(center), alpha.orbitals
+        kind = self._left.dtype
+        shift = center.astype(kind)[:, None, None]
+        rows = alpha.occupations.astype(kind)
+        columns = np.hstack([beta.occupations, np.ones((beta.count, 1))]).astype(kind)
 
-        cross = alpha.occupations.T @ (weighted @ beta.occupations)
+        second = np.zeros(count)
+        cross = np.zeros((count, n, n))
+        at_alpha, at_beta = np.zeros((count, alpha.count)), np.zeros((count, beta.count))
+        tilted_alpha, tilted_beta = np.zeros_like(self._left), np.zeros_like(self._right)
+        for block in self._blocks:
+            here, d = slice(block.start, block.stop), block.diagonal
+            deviation = block.values - shift
+            tilted = deviation * block.vector
+            second += self._weighted_dot(block, tilted, tilted)
+            weighted = tilted * block.vector
+            tilted *= deviation  # now g∘c
+            if symmetric:
+                inside = weighted[:, :, :d] @ columns[here]
+                outside = weighted[:, :, d:] @ columns[block.stop :]
+                cross += rows[here].T @ (inside + 2.0 * outside)[:, :, :n]
+                at_alpha[:, here] += inside[:, :, n] + outside[:, :, n]
+                at_alpha[:, block.stop :] += weighted[:, :, d:].sum(axis=1)
+                tilted_alpha[:, here] += tilted @ self._left[:, block.start :]
+                tilted_alpha[:, block.stop :] += tilted[:, :, d:].swapaxes(1, 2) @ self._left[:, here]
+            else:
+                inside = weighted @ columns
+                cross += rows[here].T @ inside[:, :, :n]
+                at_alpha[:, here] = inside[:, :, n]
+                at_beta += weighted.sum(axis=1)
+                tilted_alpha[:, here] = tilted @ self._right
+                tilted_beta += tilted.swapaxes(1, 2) @ self._left[:, here]
+
         i, j = pair_indices(n)
         packed = np.where(i == j, 0.5, 1.0) * (cross[:, i, j] + cross[:, j, i])
-        single = weighted.sum(axis=2) @ alpha.features + weighted.sum(axis=1) @ beta.features
-        product = np.concatenate([packed, single], axis=1)
-
-        tilted = self._vectors * deviation**2
-        gradient = np.zeros((len(center), n, n))
-        if 0 < alpha.electrons < n:
-            gradient += _antisymmetric_transition(self._vectors @ tilted.swapaxes(1, 2), alpha)
-        if 0 < beta.electrons < n:
-            gradient += _antisymmetric_transition(self._vectors.swapaxes(1, 2) @ tilted, beta)
-        return second, product, gradient
+        single = at_alpha @ alpha.features
+        gradient = _antisymmetric_transition(self._left, tilted_alpha * self._scale, alpha)
+        if symmetric:
+            single, gradient = 2.0 * single, 2.0 * gradient
+        else:
+            single = single + at_beta @ beta.features
+            gradient = gradient + _antisymmetric_transition(self._right, tilted_beta * self._scale, beta)
+        return second, np.concatenate([packed, single], axis=1), gradient
 
 
-def _single_spin_values(spin: Strings, same: Array, linear: Array) -> Array:
-    coefficients = pack_features(np.zeros_like(same), same, linear)[:, -spin.features.shape[1] :]
-    return coefficients @ spin.features.T
+def _with_columns(table: Array, second_last: Array | None, last: Array | None, kind: np.dtype) -> Array:
+    """Append two columns to (K, strings, n); ones where None. The row and column tables' product is f."""
+    count, rows, n = table.shape
+    result = np.ones((count, rows, n + 2), dtype=kind)
+    result[:, :, :n] = table
+    if second_last is not None:
+        result[:, :, n] = second_last
+    if last is not None:
+        result[:, :, n + 1] = last
+    return result
 
 
-def _antisymmetric_transition(transition: Array, spin: Strings) -> Array:
-    """2 (D_pq − D_qp) of one spin from T[I, J] = Σ c[I] (g∘c)[J] over the other spin, (K, N, N) → (K, n, n)."""
+def _antisymmetric_transition(left: Array, right: Array, spin: Strings) -> Array:
+    """2 (D_pq − D_qp), D_pq = Σ_r ⟨left_r| a†_p a_q |right_r⟩ in one spin, (K, strings, R) → (K, n, n)."""
     n = spin.orbitals
-    left, right, signs, labels = spin.singles
-    entries = signs * (transition[:, left, right] - transition[:, right, left])
-    i, j = pair_indices(n, strict=True)
-    starts = np.searchsorted(labels, np.arange(len(i)))
-    sums = np.add.reduceat(entries, starts, axis=1)
-    gradient = np.zeros((len(transition), n, n))
-    gradient[:, i, j] = 2.0 * sums
-    gradient[:, j, i] = -2.0 * sums
-    return gradient
+    if spin.electrons in (0, n):
+        return np.zeros((len(left), n, n))
+    rank, sign = spin.ladder
+    signs = sign.astype(left.dtype)[:, None]
+    # Below half filling ⟨a_p left|a_q right⟩; above it −⟨a†_q left|a†_p right⟩, which has fewer strings.
+    bras = (left[:, rank] * signs).reshape(len(left), n, -1)
+    kets = (right[:, rank] * signs).reshape(len(left), n, -1)
+    transition = (bras @ kets.swapaxes(1, 2)).astype(np.float64)
+    return 2.0 * (transition - transition.swapaxes(1, 2))

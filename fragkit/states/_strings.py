@@ -42,13 +42,12 @@ def string_ranks(occupied: Index) -> Index:
 
 
 @lru_cache(maxsize=64)
-def _expansion(orbitals: int, electrons: int) -> tuple[Index, Array]:
+def _expansion(orbitals: int, electrons: int) -> tuple[Index, list[float]]:
     """For each string and each t: rank of the string without its t-th orbital, and the sign of that cofactor."""
     occupied = occupied_orbitals(orbitals, electrons)
     k = electrons
     ranks = np.stack([string_ranks(np.delete(occupied, t, axis=1)) for t in range(k)])
-    signs = np.array([(-1.0) ** (k - 1 - t) for t in range(k)])
-    return ranks, signs
+    return ranks, [1.0 if (k - 1 - t) % 2 == 0 else -1.0 for t in range(k)]
 
 
 def minors(matrices: Array, size: int) -> Array:
@@ -62,19 +61,17 @@ def minors(matrices: Array, size: int) -> Array:
     n = matrices.shape[-1]
     lead = matrices.shape[:-2]
     if size == 0:
-        return np.ones((*lead, 1, 1))
+        return np.ones((*lead, 1, 1), dtype=matrices.dtype)
     columns_first = np.ascontiguousarray(np.swapaxes(matrices, -1, -2))
     table = columns_first
     for k in range(2, size + 1):
         occupied = occupied_orbitals(n, k)
         without, signs = _expansion(n, k)
-        grown = np.zeros((*lead, len(occupied), len(occupied)))
+        last, before = occupied[:, -1], without[k - 1]
+        grown = 0.0
         for t in range(k):
-            factor = signs[t] * columns_first[..., occupied[:, t], :]
-            cofactor = table[..., without[t], :]
-            for row in range(k - 1, n):
-                start, count = comb(row, k), comb(row, k - 1)
-                grown[..., start : start + count] += factor[..., row, None] * cofactor[..., :count]
+            cofactor = table[..., without[t], :][..., before]
+            grown = grown + signs[t] * columns_first[..., occupied[:, t], :][..., last] * cofactor
         table = grown
     return table
 
@@ -139,26 +136,26 @@ class Strings:
         return table
 
     @cached_property
-    def singles(self) -> tuple[Index, Index, Array, Index]:
-        """Single excitations p < q: strings I with p and J with q, sign, and the packed index of the pair (p, q).
+    def ladder(self) -> tuple[Index, Array]:
+        """What one annihilator (below half filling) or one creator (above) does, for all n operators in turn.
 
-        For each, ⟨I| a†_p a_q |J⟩ = sign and ⟨J| a†_q a_p |I⟩ = sign; sorted by pair.
+        For operator p and each string I of one electron less (or more): the rank of the string that a_p (a†_p) takes to
+        I, and the sign; sign 0 and rank 0 where there is none. Both have length n × (number of strings I).
         """
-        n = self.orbitals
-        bits = self.occupations.astype(np.intp)
+        n, k = self.orbitals, self.electrons
+        creates = 2 * k > n
+        reached = strings(n, k + 1 if creates else k - 1)
+        bits = reached.occupations.astype(np.intp)
         numbers = bits @ (1 << np.arange(n, dtype=np.intp))
-        before = np.cumsum(bits, axis=1) - bits
-        lefts, rights, signs, labels = [], [], [], []
-        for label, (p, q) in enumerate(zip(*pair_indices(n, strict=True), strict=True)):
-            right = np.flatnonzero((bits[:, q] == 1) & (bits[:, p] == 0))
-            left = np.searchsorted(numbers, numbers[right] - (1 << int(q)) + (1 << int(p)))
-            # a_q passes the electrons below q, then a†_p those below p.
-            between = before[right, q] - before[right, p]
-            lefts.append(left)
-            rights.append(right)
-            signs.append((-1.0) ** between)
-            labels.append(np.full(len(right), label, dtype=np.intp))
-        return np.concatenate(lefts), np.concatenate(rights), np.concatenate(signs), np.concatenate(labels)
+        own = self.occupations.astype(np.intp) @ (1 << np.arange(n, dtype=np.intp))
+        below = np.cumsum(bits, axis=1) - bits
+        ranks, signs = [], []
+        for p in range(n):
+            allowed = bits[:, p] == (1 if creates else 0)
+            source = numbers - (1 << p) if creates else numbers + (1 << p)
+            ranks.append(np.where(allowed, np.searchsorted(own, np.where(allowed, source, own[0])), 0))
+            signs.append(np.where(allowed, (-1.0) ** below[:, p], 0.0))
+        return np.concatenate(ranks), np.concatenate(signs)
 
 
 @lru_cache(maxsize=64)
