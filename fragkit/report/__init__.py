@@ -1,5 +1,6 @@
 """Tables, notebook views and figures."""
 
+from fragkit.report._comparison import comparison_table as comparison_table
 from fragkit.report._estimate import estimate_html as estimate_html
 from fragkit.report._estimate import estimate_summary as estimate_summary
 from fragkit.report._estimate import estimate_table as estimate_table
