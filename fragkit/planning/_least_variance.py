@@ -48,7 +48,10 @@ def newton_weights(
     `start` is a first guess of the shares, `report(cost)` is called in every iteration.
     """
     count = design.count
-    weights = np.full(count, 1.0 / count) if start is None else np.maximum(start, 1e-4 / count)
+    # A circuit that reads nothing but what is known (or free) needs no shots and would spoil the barrier.
+    active = np.array([bool(np.any(design.matrix[:, block])) for block in design.blocks])
+    weights = np.full(count, 1.0 / count) if start is None else np.maximum(start / np.sum(start), 1e-4 / count)
+    weights = np.where(active, weights, 0.0)
     slack: Array | None = None
     best: Weights | None = None
     polish = start is None
@@ -78,16 +81,20 @@ def newton_weights(
             return best
         if polish and iteration < 2:
             # The multiplicative update is the better step far from the solution.
-            weights = weights * np.sqrt(sizes)
+            weights = weights * np.maximum(np.sqrt(sizes), 1e-2)
             continue
         if slack is None:
-            slack = np.maximum(1.0 - sizes, 0.1)
-        weights, slack = _step(design, information, scale, weights, slack, sizes, response)
+            slack = np.maximum(1.0 - sizes[active], 0.1)
+        blocks = [block for block, keep in zip(design.blocks, active, strict=True) if keep]
+        stepped, slack = _step(design, blocks, information, scale, weights[active], slack, sizes[active], response)
+        weights = np.zeros(count)
+        weights[active] = stepped
     raise AssertionError  # the loop always returns
 
 
 def _step(
     design: WhitenedDesign,
+    blocks: list[slice],
     information: Information,
     scale: float,
     weights: Array,
@@ -96,7 +103,7 @@ def _step(
     response: Array,
 ) -> tuple[Array, Array]:
     """One primal-dual step with Mehrotra's choice of the barrier; M⁻¹ of `information` is `scale` too large."""
-    gradients = np.stack([design.matrix[:, block] @ response[block] for block in design.blocks], axis=1)
+    gradients = np.stack([design.matrix[:, block] @ response[block] for block in blocks], axis=1)
     halves = information.half_inverse(gradients)
     hessian = 2.0 / scale * (halves.T @ halves)
     system = hessian + np.diag(slack / weights)

@@ -14,7 +14,7 @@ from fragkit.planning._shifts import Shifts
 Array = NDArray[np.float64]
 
 NULL_VARIANCE = 1e-12
-"""Eigenvalues of a covariance below this fraction of the largest are zero: the feature costs no shots."""
+"""Eigenvalues of a covariance below this fraction of the largest (or of one) are zero: they cost no shots."""
 
 RANK_TOLERANCE = 1e-9
 """Singular values of unit-norm operators below this fraction of the largest are rounding noise."""
@@ -41,7 +41,7 @@ class WhitenedDesign:
         self._null: list[Array] = []
         for covariance in covariances:
             values, vectors = np.linalg.eigh(covariance)
-            keep = values > NULL_VARIANCE * max(values[-1], 1e-300)
+            keep = values > NULL_VARIANCE * max(values[-1], 1.0)
             self.whiteners.append(vectors[:, keep] / np.sqrt(values[keep]))
             self._null.append(vectors[:, ~keep])
         sizes = [whitener.shape[1] for whitener in self.whiteners]
@@ -62,7 +62,7 @@ class WhitenedDesign:
         self._lengths = np.linalg.norm(self.matrix, axis=0)
         self.unreachable = 0.0
         if self.matrix.shape[1] < space.size - shifts.basis.shape[1] - self.free_basis.shape[1]:
-            self._reduce()
+            self.reduce()
 
     @property
     def count(self) -> int:
@@ -76,7 +76,7 @@ class WhitenedDesign:
             rows = rows - self.free_basis @ (self.free_basis.T @ rows)
         return rows
 
-    def _reduce(self) -> None:
+    def reduce(self) -> None:
         """Change to a basis of the operators that the circuits span."""
         if self._basis is not None:
             return
@@ -100,7 +100,7 @@ class WhitenedDesign:
         """M = Σ_m w_m B_m B_mᵀ, ready to solve with; changes to a smaller basis once if M is singular."""
         found = Information(self, weights)
         if found.singular and self._basis is None:
-            self._reduce()
+            self.reduce()
             found = Information(self, weights)
         return found
 

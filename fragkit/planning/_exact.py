@@ -1,0 +1,204 @@
+"""Coefficients and shares of least variance at fixed rotations that reproduce the Hamiltonian exactly."""
+
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fragkit.core import Hamiltonian, InputError, as_real_array, energy_bound, feature_count, residual_norm
+from fragkit.planning._cone import cone_weights
+from fragkit.planning._least_variance import Weights, newton_weights
+from fragkit.planning._operators import OperatorSpace
+from fragkit.planning._shifts import no_shifts, sector_shifts
+from fragkit.planning._whitened import WhitenedDesign
+
+Array = NDArray[np.float64]
+
+EXACT = 1e-9
+"""Largest residual, relative to the Hamiltonian's rows, of coefficients that count as exact."""
+
+
+@dataclass(frozen=True, eq=False)
+class Weighting:
+    """Least-variance coefficients of K circuits.
+
+    Parameters
+    ----------
+    coefficients
+        (K, n² + n) packed features, hartree; zero for circuits that are not needed.
+    shares
+        (K,) fractions of the shots, σ/Σσ.
+    constant
+        Energy that needs no measurement, hartree: the Hamiltonian's constant and what the shifts are worth.
+    deviations
+        (K,) σ of one shot under the covariances given, hartree.
+    residual_norm, energy_bound
+        What the circuits cannot reproduce, as in `fragkit.core.Fragmentation`, and the bias it can cause, hartree.
+    relative_residual
+        Norm of that residual over the norm of the Hamiltonian, both as operator rows.
+    lower_bound
+        No coefficients on these rotations have a lower cost (Ha²) under these covariances.
+    dual
+        (rows,) ν of `OperatorSpace` with |C_m^{-1/2} A_mᵀ ν| ≤ 1 up to the tolerance and hᵀν = √cost.
+    sector_exact
+        Whether operators that vanish at the electron numbers were used.
+    converged, message
+        Whether the coefficients are exact and the cost is within the tolerance of the lower bound.
+    """
+
+    coefficients: Array
+    shares: Array
+    constant: float
+    deviations: Array
+    residual_norm: float
+    energy_bound: float
+    relative_residual: float
+    lower_bound: float
+    dual: Array
+    sector_exact: bool
+    converged: bool
+    message: str
+
+    @property
+    def cost(self) -> float:
+        """(Σ σ)² in hartree²."""
+        return float(np.sum(self.deviations) ** 2)
+
+
+def exact_coefficients(
+    hamiltonian: Hamiltonian,
+    rotations: Array,
+    covariances: Sequence[Array] | Array,
+    *,
+    shifts: bool = True,
+    start: Array | None = None,
+    tolerance: float = 1e-6,
+    iterations: int = 60,
+    method: str = "newton",
+    report: Callable[[float], None] | None = None,
+) -> Weighting:
+    """The globally least-variance exact coefficients and shot shares for given rotations.
+
+    Minimises (Σ_m √(c_mᵀ C_m c_m))² over coefficients with Σ_m A_m c_m equal to the Hamiltonian: a second-order cone
+    programme, solved in its weights (`newton_weights`).
+
+    Parameters
+    ----------
+    hamiltonian
+        What the fragments must sum to.
+    rotations
+        (K, n, n) orthogonal.
+    covariances
+        (K, n² + n, n² + n) of the features in each rotated basis, from `ReferenceState.moments`, from measurements
+        or from anywhere else. Combinations of features without variance cost nothing.
+    shifts
+        Use operators that vanish at the Hamiltonian's electron numbers; the result is then exact only there.
+    start
+        (K,) first guess of the shares.
+    tolerance
+        Largest relative distance of the cost from its lower bound.
+    iterations
+        Most Newton steps; each factorises a matrix of about n⁴/5 rows.
+    method
+        "newton", or "cone" for the cone programme as it stands, by a general solver: slow, for checks.
+    report
+        Called with the cost in each Newton step.
+
+    Raises
+    ------
+    InputError
+        If a shape is wrong or an entry is not finite.
+
+    Examples
+    --------
+    >>> import numpy as np
+    >>> from fragkit.core import Hamiltonian
+    >>> from fragkit.states import reference_state
+    >>> on_site = np.zeros((2, 2, 2, 2))
+    >>> on_site[0, 0, 0, 0] = on_site[1, 1, 1, 1] = 4.0
+    >>> ham = Hamiltonian(0.0, np.array([[0.0, -1.0], [-1.0, 0.0]]), on_site, electrons=(1, 1))
+    >>> turn = np.array([[1.0, -1.0], [1.0, 1.0]]) / np.sqrt(2)
+    >>> state = reference_state(ham, "hf")
+    >>> rotations = np.stack([np.eye(2), turn])
+    >>> found = exact_coefficients(ham, rotations, [state.moments(u)[1] for u in rotations])
+    >>> found.converged, bool(found.relative_residual < 1e-12)
+    (True, True)
+    """
+    n = hamiltonian.orbitals
+    rotations = as_real_array(rotations, "rotations", (None, n, n))
+    features = feature_count(n)
+    if len(covariances) != len(rotations):
+        raise InputError(f"`covariances` must be {len(rotations)}, one for each rotation (got {len(covariances)})")
+    checked = [as_real_array(c, f"covariances[{m}]", (features, features)) for m, c in enumerate(covariances)]
+    if start is not None:
+        start = as_real_array(start, "start", (len(rotations),))
+    if method not in ("newton", "cone"):
+        raise InputError(f"`method` must be 'newton' or 'cone' (got {method!r})")
+    space = OperatorSpace(n)
+    free = sector_shifts(space, hamiltonian.electrons) if shifts else no_shifts(space)
+    target = space.hamiltonian_rows(hamiltonian)
+    design = WhitenedDesign(space, rotations, checked, target, free)
+    if method == "cone":
+        found = cone_weights(design, tolerance=0.1 * tolerance)
+    else:
+        found = newton_weights(design, start=start, tolerance=tolerance, iterations=iterations, report=report)
+    coefficients = _refined(design, found)
+    covariance_products = np.stack([c @ x for c, x in zip(checked, coefficients, strict=True)])
+    deviations = np.sqrt(np.maximum(np.einsum("kf,kf->k", coefficients, covariance_products), 0.0))
+    left, constant = free.split(target - space.apply(design.columns, rotations, coefficients))
+    tensors = space.tensors(left)
+    size = float(np.linalg.norm(target))
+    relative = float(np.linalg.norm(left)) / size if size else 0.0
+    total = float(np.sum(deviations))
+    gap = total**2 - found.lower_bound
+    exact = relative <= EXACT
+    settled = gap <= 2.0 * tolerance * total**2 or total**2 <= 1e-18
+    return Weighting(
+        coefficients=coefficients,
+        shares=deviations / total if total else np.full(len(rotations), 1.0 / len(rotations)),
+        constant=hamiltonian.constant + constant,
+        deviations=deviations,
+        residual_norm=residual_norm(tensors),
+        energy_bound=energy_bound(tensors, hamiltonian.electrons),
+        relative_residual=relative,
+        lower_bound=found.lower_bound,
+        dual=design.to_rows(found.dual),
+        sector_exact=shifts,
+        converged=exact and settled,
+        message=_message(relative, exact, settled, gap, total**2, found.iterations),
+    )
+
+
+def _refined(design: WhitenedDesign, found: Weights) -> Array:
+    """Coefficients (K, F) of the weights, corrected until what is left is rounding noise."""
+    coefficients = design.features(design.coefficients(found.weights, found.dual))
+    information = found.information
+    wanted = float(np.linalg.norm(design.wanted))
+    size = np.inf
+    for _ in range(6):
+        left = design.from_rows(design.residual(coefficients))
+        now = float(np.linalg.norm(left))
+        if now <= 1e-15 * wanted or now > 0.5 * size:
+            break
+        size = now
+        step = design.coefficients(information.weights, information.inverse(left))
+        coefficients = coefficients + design.features(step)
+    return coefficients + design.free_part(design.residual(coefficients))
+
+
+def _message(relative: float, exact: bool, settled: bool, gap: float, cost: float, iterations: int) -> str:
+    parts = []
+    if not exact:
+        parts.append(
+            f"These rotations cannot reproduce the Hamiltonian: a relative residual of {relative:.2g} is left; "
+            "use more circuits, or other rotations."
+        )
+    if not settled:
+        parts.append(
+            f"The cost is within {gap / cost:.2g} (relative) of its least value for these rotations after {iterations} "
+            "iterations; raise `iterations`."
+        )
+    if not parts:
+        parts.append(f"Least-variance coefficients found in {iterations} iterations.")
+    return " ".join(parts)
