@@ -232,7 +232,7 @@ def _findings(samples: list[Sample], predicted: Array, consistency: float | None
         )
     if consistency is not None and consistency < _DOUBTFUL:
         findings.append(
-            f"The circuits do not fit one state (p = {consistency:.1g}): readout errors, drift between circuits or "
-            "circuits in another order."
+            f"The circuits do not fit one state (p = {consistency:.1g}): readout errors that differ between "
+            "qubits, drift between circuits, or circuits in another order."
         )
     return findings
