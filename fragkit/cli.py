@@ -242,9 +242,7 @@ def _export(options: argparse.Namespace) -> int:
     write_circuits(options.output, circuits, language=options.format, overwrite=options.overwrite)
     gates = sum(circuit.givens_count for circuit in circuits)
     depth = max(circuit.depth for circuit in circuits)
-    print(
-        f"{len(circuits)} circuits written to {options.output}: {gates} Givens rotations, at most {depth} layers of them"
-    )
+    print(f"{len(circuits)} circuits written to {options.output}: {gates} Givens rotations in at most {depth} layers")
     return EXIT_OK
 
 
