@@ -65,7 +65,7 @@ def openqasm2(circuit: RotationCircuit, *, preparation: str = "", measure: bool 
 
 def _one_circuit(circuit: RotationCircuit, version: int, preparation: str, measure: bool) -> str:
     notes = [f"{key}: {text}" for key, text in circuit.provenance]
-    if circuit.dropped:
+    if circuit.angle_tolerance > 0.0:
         notes.append(
             f"{circuit.dropped} rotations left out (tolerance {circuit.angle_tolerance:g} rad); total variation "
             f"distance of the probabilities at most {circuit.distribution_bound:.3g}."

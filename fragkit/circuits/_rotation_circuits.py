@@ -9,7 +9,6 @@ from numpy.typing import NDArray
 from fragkit.circuits._circuit import Layout, RotationCircuit
 from fragkit.circuits._compile import (
     LineAngles,
-    Order,
     Readout,
     distribution_bound,
     earliest_layers,
@@ -121,7 +120,7 @@ def rotation_circuits(
             readout=compiled.readout,
             qubits=qubits,
             signs=frozen(compiled.signs),
-            dropped=_dropped(rotation, layout, order, compiled) if tolerance > 0.0 else 0,
+            dropped=_dropped(rotation, layout, readout, compiled) if tolerance > 0.0 else 0,
             angle_tolerance=tolerance,
             distribution_bound=min(1.0, distribution_bound(rotation, layout, compiled, pair)),
             provenance=note,
@@ -132,9 +131,9 @@ def rotation_circuits(
     return circuits
 
 
-def _dropped(rotation: Array, layout: Layout, order: Order, compiled: LineAngles) -> int:
-    """How many rotations the exact circuit with the same readout has more."""
-    exact = line_angles(rotation, layout, order, 0.0)
+def _dropped(rotation: Array, layout: Layout, readout: Readout, compiled: LineAngles) -> int:
+    """How many rotations more the exact circuit with the same options has."""
+    exact = line_angles(rotation, layout, readout_order(rotation, layout, readout, 0.0), 0.0)
     return max(0, int(np.count_nonzero(exact.angles) - np.count_nonzero(compiled.angles)))
 
 
