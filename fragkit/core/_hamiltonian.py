@@ -166,7 +166,7 @@ class Hamiltonian:
 
         Integrals are rounded to 1e-10 hartree first, so that saving and loading does not change it.
         """
-        chain = hashlib.sha256(f"{self.orbitals} {self.electrons} {self.constant:.10f}".encode())
+        chain = hashlib.sha256(f"{self.orbitals} {self.electrons} {self.constant:z.10f}".encode())
         two_electron = self.factors if self.from_factors else self.two_body
         for array in (self.one_body, two_electron):
             # Adding 0.0 turns -0.0 into 0.0, which has other bytes.

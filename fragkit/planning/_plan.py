@@ -143,7 +143,7 @@ class Plan:
     @cached_property
     def digest(self) -> str:
         """Hexadecimal SHA-256 of the fragments and the Hamiltonian's digest: counts belong to one plan."""
-        chain = hashlib.sha256(f"{self.hamiltonian_digest} {self.electrons} {self.constant:.10f}".encode())
+        chain = hashlib.sha256(f"{self.hamiltonian_digest} {self.electrons} {self.constant:z.10f}".encode())
         for fragment in self.fragments:
             for array in (fragment.rotation, fragment.coefficients):
                 chain.update((np.round(array, 10) + 0.0).tobytes())
