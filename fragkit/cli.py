@@ -122,7 +122,7 @@ def _parser() -> argparse.ArgumentParser:
     sub.add_argument(
         "--spin-order",
         choices=("blocked", "interleaved"),
-        help="qubit order of such a list: the layout of the circuits",
+        help="order of the bits in such a list; the bits of exported circuits are blocked in either layout",
     )
 
     sub = command("compare", _compare, "compare the shots that different ways of measuring need")

@@ -93,8 +93,9 @@ class Counts:
         bit_order
             "first-qubit-left" if the first character is qubit 0, "first-qubit-right" if the last one is.
         spin_order
-            "blocked" if the alpha orbitals are the first n qubits, "interleaved" if alpha and beta take turns;
-            the layout that the circuits were exported with.
+            "blocked" if the alpha orbitals are the first n bits, "interleaved" if alpha and beta take turns. The
+            measured bits of exported circuits are blocked in either layout; "interleaved" is for bits that were
+            read qubit by qubit from an interleaved register whose readout stayed in place.
         qubits
             Position of each of the circuit's qubits among the measured bits, when they are not simply in order.
         batch
