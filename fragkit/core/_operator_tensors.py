@@ -65,7 +65,7 @@ def residual_norm(residual: OperatorTensors) -> float:
     tensor; the Frobenius norm of the one-body part when the two-body part is written as products E_pq E_rs. For
     fragments of the plain form ½ Σ λ_ij n_i n_j it is the Frobenius norm of the two-electron tensor's residual.
     """
-    contracted = residual.one_body + 0.5 * np.einsum("prrq->pq", residual.opposite_spin)
+    contracted = residual.one_body - 0.5 * np.einsum("prrq->pq", residual.opposite_spin)
     return float(
         max(
             np.linalg.norm(residual.opposite_spin),
@@ -99,7 +99,7 @@ def energy_bound(residual: OperatorTensors, electrons: tuple[int, int]) -> float
     odd = opposite - opposite.transpose(0, 3, 2, 1)
     rest = (acting - odd).transpose(0, 2, 1, 3)[rows, columns][:, rows, columns]
     values, vectors = np.linalg.eigh(opposite.reshape(n * n, n * n))
-    by_products = _one_body_bound(residual.one_body + 0.5 * np.einsum("prrq->pq", opposite), electrons)
+    by_products = _one_body_bound(residual.one_body - 0.5 * np.einsum("prrq->pq", opposite), electrons)
     by_products += like_pairs * _largest_eigenvalue(rest)
     for value, vector in zip(values, vectors.T, strict=True):
         if value != 0.0:
