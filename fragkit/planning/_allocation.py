@@ -31,7 +31,7 @@ def shots_for_error(deviations: Array, target_error: float, *, minimum: int = 1,
     """
     shape = _shape(deviations, guide)
 
-    def error(shots: Array) -> float:
+    def error(shots: Array | Shots) -> float:
         return float(np.sqrt(np.sum(deviations**2 / shots)))
 
     def clamped(scale: float) -> Array:

@@ -1,14 +1,20 @@
 """From fragments to a plan: shots, promised error, quantum limit, costs in other states."""
 
 from collections.abc import Sequence
+from dataclasses import replace
+from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from fragkit.core import Fragment, Hamiltonian, cheapest_order
 from fragkit.planning._budget import Budget
 from fragkit.planning._cost import fragment_deviations
+from fragkit.planning._exact import Weighting
 from fragkit.planning._plan import Plan, PlanBound
 from fragkit.states import DeterminantState, ReferenceState
+
+Array = NDArray[np.float64]
 
 NOISE_LEVELS = (0.01, 0.05)
 """Depolarisations within the sector under which every plan states its cost."""
@@ -20,48 +26,62 @@ def assemble(
     fragments: Sequence[Fragment],
     budget: Budget,
     *,
-    constant: float,
-    residual_norm: float,
-    energy_bound: float,
-    sector_exact: bool,
     planned_on: ReferenceState | None = None,
-    converged: bool = True,
-    message: str = "",
-    method: str = "",
-    seconds: float = 0.0,
+    reorder: bool = True,
+    **promises: Any,
 ) -> Plan:
-    """A plan whose error is predicted in `state` and whose shots are shared as `planned_on` asks (`state` if None)."""
-    ordered = [fragment.reordered(*cheapest_order(fragment.rotation)) for fragment in fragments]
+    """A plan whose error is predicted in `state` and whose shots are shared as `planned_on` asks (`state` if None).
+
+    With `reorder` the orbitals of each fragment are listed in the order that is cheapest to compile. `promises` are
+    the remaining fields of the plan.
+    """
+    ordered = [f.reordered(*cheapest_order(f.rotation)) for f in fragments] if reorder else list(fragments)
     deviations = fragment_deviations(ordered, state)
     guide = deviations if planned_on is None else fragment_deviations(ordered, planned_on)
-    shots = budget.shots(deviations, guide, [fragment.rotation for fragment in ordered])
-    shares = shots / np.sum(shots)
+    plan = with_shots(hamiltonian, ordered, budget, deviations, guide, reference=state.description, **promises)
 
     def cost_in(other: ReferenceState) -> float:
-        return float(np.sum(fragment_deviations(ordered, other) ** 2 / shares))
+        return float(np.sum(fragment_deviations(ordered, other) ** 2 / plan.shares))
 
     diagnostics = {
-        "reference": float(np.sum(deviations**2 / shares)),
+        "reference": float(np.sum(deviations**2 / plan.shares)),
         "Hartree-Fock": cost_in(DeterminantState.hartree_fock(hamiltonian)),
     }
     for level in NOISE_LEVELS:
         diagnostics[f"reference with {100 * level:g} % noise"] = cost_in(state.with_noise(level))
+    return replace(plan, bound=PlanBound(state.variance(hamiltonian)), diagnostics=diagnostics)
+
+
+def with_shots(
+    hamiltonian: Hamiltonian,
+    fragments: Sequence[Fragment],
+    budget: Budget,
+    deviations: Array,
+    guide: Array,
+    **promises: Any,
+) -> Plan:
+    """A plan for known deviations, without costs in other states."""
     return Plan(
-        fragments=tuple(ordered),
-        constant=constant,
-        shots=shots,
+        fragments=tuple(fragments),
+        shots=budget.shots(deviations, guide, [fragment.rotation for fragment in fragments]),
         deviations=deviations,
         electrons=hamiltonian.electrons,
         hamiltonian_digest=hamiltonian.digest,
-        residual_norm=residual_norm,
-        energy_bound=energy_bound,
-        sector_exact=sector_exact,
         target_error=budget.target_error,
-        reference=state.description,
-        bound=PlanBound(state.variance(hamiltonian)),
-        diagnostics=diagnostics,
-        converged=converged,
-        message=message,
-        method=method,
-        seconds=seconds,
+        **promises,
     )
+
+
+def weighting_fragments(rotations: Array, weighting: Weighting) -> list[Fragment]:
+    """Fragments of least-variance coefficients."""
+    return [Fragment.from_coefficients(u, c) for u, c in zip(rotations, weighting.coefficients, strict=True)]
+
+
+def weighting_promises(weighting: Weighting) -> dict[str, Any]:
+    """The fields of a plan that follow from how exact its coefficients are."""
+    return {
+        "constant": weighting.constant,
+        "residual_norm": weighting.residual_norm,
+        "energy_bound": weighting.energy_bound,
+        "sector_exact": weighting.sector_exact,
+    }

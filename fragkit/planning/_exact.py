@@ -165,7 +165,7 @@ def exact_coefficients(
         lower_bound=found.lower_bound,
         dual=design.to_rows(found.dual),
         sector_exact=shifts,
-        converged=exact and settled,
+        converged=bool(exact and settled),
         message=_message(relative, exact, settled, gap, total**2, found.iterations),
     )
 

@@ -5,8 +5,8 @@ from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import cho_solve, cholesky, lstsq
-from scipy.linalg.blas import dsyrk
+from scipy.linalg import cho_solve, cholesky, lstsq, solve_triangular
+from scipy.linalg.blas import dsyrk  # pyright: ignore[reportAttributeAccessIssue]
 
 from fragkit.planning._operators import OperatorSpace
 from fragkit.planning._shifts import Shifts
@@ -15,6 +15,9 @@ Array = NDArray[np.float64]
 
 NULL_VARIANCE = 1e-12
 """Eigenvalues of a covariance below this fraction of the largest (or of one) are zero: they cost no shots."""
+
+FREE_TOLERANCE = 1e-8
+"""Operators without variance that are smaller than this outside the shifts are shifts, but for rounding."""
 
 RANK_TOLERANCE = 1e-9
 """Singular values of unit-norm operators below this fraction of the largest are rounding noise."""
@@ -54,7 +57,9 @@ class WhitenedDesign:
             self.matrix[:, block] = shifts.project(operators @ self.whiteners[m])
             free.append(shifts.project(operators @ self._null[m]))
         self._free_operators = np.concatenate(free, axis=1)
-        self.free_basis = _range(self._free_operators, 1e-7) if self._free_operators.size else np.zeros((space.size, 0))
+        self.free_basis = np.zeros((space.size, 0))
+        if np.any(np.abs(self._free_operators) > FREE_TOLERANCE):
+            self.free_basis = _range(self._free_operators, FREE_TOLERANCE)
         if self.free_basis.shape[1]:
             self.matrix -= self.free_basis @ (self.free_basis.T @ self.matrix)
         self.wanted = self.project(target)
@@ -81,11 +86,12 @@ class WhitenedDesign:
         if self._basis is not None:
             return
         lengths = np.where(self._lengths > 0, self._lengths, 1.0)
-        self._basis = _range(self.matrix / lengths, RANK_TOLERANCE)
+        basis = _range(self.matrix / lengths, RANK_TOLERANCE)
         full = self.wanted
-        self.matrix = np.asfortranarray(self._basis.T @ self.matrix)
-        self.wanted = self._basis.T @ full
-        self.unreachable = float(np.linalg.norm(full - self._basis @ self.wanted))
+        self.matrix = np.asfortranarray(basis.T @ self.matrix)
+        self.wanted = basis.T @ full
+        self.unreachable = float(np.linalg.norm(full - basis @ self.wanted))
+        self._basis = basis
 
     def to_rows(self, vector: Array) -> Array:
         """A vector of the working basis as operator rows."""
@@ -123,7 +129,7 @@ class WhitenedDesign:
         if not self.free_basis.shape[1]:
             return np.zeros((self.count, features))
         inside = self.free_basis @ (self.free_basis.T @ residual)
-        solution = lstsq(self._free_operators, inside, cond=1e-8, lapack_driver="gelsy")[0]
+        solution = np.asarray(lstsq(self._free_operators, inside, cond=1e-8, lapack_driver="gelsy")[0])
         ends = np.cumsum([null.shape[1] for null in self._null])
         parts = np.split(solution, ends[:-1])
         return np.stack([null @ part for null, part in zip(self._null, parts, strict=True)])
@@ -169,8 +175,6 @@ class Information:
 
     def half_inverse(self, vectors: Array) -> Array:
         """L⁻¹ applied to vectors, M = L Lᵀ."""
-        from scipy.linalg import solve_triangular
-
         return solve_triangular(self._factor, vectors, lower=True, check_finite=False)
 
 

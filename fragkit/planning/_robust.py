@@ -1,0 +1,47 @@
+"""The state a plan is made for: the reference with a little noise, so that coefficients stay bounded."""
+
+from fragkit.core import InputError
+from fragkit.states import DeterminantState, MaximallyMixedState, MixedState, ReferenceState
+
+PLANNING_NOISE = 1e-3
+"""Default weight of the maximally mixed state in the state that coefficients and rotations are chosen for."""
+
+
+def noise_of(state: ReferenceState) -> float:
+    """Weight of the maximally mixed state in `state`."""
+    if isinstance(state, MaximallyMixedState):
+        return 1.0
+    if isinstance(state, MixedState):
+        return sum(w for w, part in zip(state.weights, state.states, strict=True) if noise_of(part) == 1.0)
+    return 0.0
+
+
+def robust_state(state: ReferenceState, planning_noise: float) -> ReferenceState:
+    """`state` with at least `planning_noise` of the maximally mixed state of its sector.
+
+    The variance of a fragment in the maximally mixed state is a norm of its coefficients, so the noise is a penalty
+    that is scaled right for every coefficient: without it a plan can be arbitrarily bad on a state that differs a
+    little from the reference.
+
+    Raises
+    ------
+    InputError
+        If `planning_noise` is not in 0 … 1, or is 0 for a single determinant, in whose orbitals nothing fluctuates:
+        such a plan would leave circuits without shots that every correlated state needs.
+    """
+    try:
+        wanted = float(planning_noise)
+    except (TypeError, ValueError):
+        wanted = -1.0
+    if not 0.0 <= wanted <= 1.0:
+        raise InputError(f"`planning_noise` must be a number from 0 to 1 (got {planning_noise!r})")
+    present = noise_of(state)
+    if wanted == 0.0 and isinstance(state, DeterminantState):
+        raise InputError(
+            "`planning_noise` must be above 0 for a single determinant (got 0); leave it at its default, or use a "
+            'correlated reference such as reference_state(ham, "cisd")'
+        )
+    if wanted <= present:
+        return state
+    # (1 − extra) (1 − present) = 1 − wanted
+    return state.with_noise(1.0 - (1.0 - wanted) / (1.0 - present))
