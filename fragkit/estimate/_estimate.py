@@ -1,16 +1,17 @@
 """Energy and error bar from the counts of a plan."""
 
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Fragment, InputError, as_positive, frozen
+from fragkit.core import Fragment, InputError, MismatchError, as_positive, frozen
 from fragkit.estimate._consistency import OccupationFit, check_reading
+from fragkit.estimate._correction import Correction
 from fragkit.estimate._counts import Counts
 from fragkit.estimate._missing import check_complete
-from fragkit.estimate._sector import check_sector, in_sector
+from fragkit.estimate._readout import ReadoutErrors
+from fragkit.estimate._sector import check_every_circuit_keeps_shots, check_sector, in_sector
 from fragkit.estimate._statistics import Sample, error_bar
 from fragkit.planning import Plan
 
@@ -54,8 +55,14 @@ class Estimate:
         (circuits,) the same for each circuit.
     without_post_selection
         (energy, standard error) of the same counts with all shots, or None if nothing was discarded.
+    calibration_error
+        Part of `standard_error` that comes from the uncertain readout calibration; None without readout correction.
+    sector_leak
+        (mean, standard error) of (N̂ − N)² after readout correction, zero for a state with the right number of
+        electrons; None without readout correction.
     consistency
-        p-value of "all circuits saw one state", from their occupations; None if there are too few circuits to test.
+        p-value of "all circuits saw one state", from their occupations; None if there are too few circuits to test,
+        and with readout correction.
     agrees
         False when observed and predicted deviations differ beyond chance, or the circuits do not fit one state.
     message
@@ -76,6 +83,8 @@ class Estimate:
     discarded: float
     discarded_by_circuit: Array
     without_post_selection: tuple[float, float] | None
+    calibration_error: float | None
+    sector_leak: tuple[float, float] | None
     consistency: float | None
     agrees: bool
     message: str
@@ -110,8 +119,9 @@ def estimate(
     counts: Counts,
     *,
     post_select: bool | None = None,
+    readout: ReadoutErrors | None = None,
     confidence: float = 0.95,
-    least_kept: float = 0.5,
+    least_kept: float | None = None,
 ) -> Estimate:
     """Energy, standard error and confidence interval from the counts of a plan.
 
@@ -129,18 +139,21 @@ def estimate(
     post_select
         Use only shots with the plan's electron numbers. By default this is done for plans that are exact only
         there (`plan.sector_exact`).
+    readout
+        Readout errors to correct for. All shots are used then: discarding shots by their misread electron numbers
+        would leave errors that are no longer independent. The state's own electron numbers are checked instead.
     confidence
         Probability of the interval.
     least_kept
-        Smallest fraction of shots that must have the plan's electron numbers.
+        Smallest fraction of shots that must have the plan's electron numbers: one half, or 0 with `readout`.
 
     Raises
     ------
     MismatchError
         If the counts belong to another plan.
     InputError
-        If a circuit has no shots, most shots have impossible electron numbers, or the occupations show that the
-        bits were read in a wrong order.
+        If a circuit has no shots, most shots have impossible electron numbers, the occupations show that the bits
+        were read in a wrong order, or post-selection and readout correction are asked for together.
 
     Examples
     --------
@@ -164,19 +177,28 @@ def estimate(
     if not 0.0 < as_positive(confidence, "confidence") < 1.0:
         raise InputError(f"`confidence` must be between 0 and 1 (got {confidence})")
     check_complete(plan, counts)
-    kept = check_sector(counts, plan.electrons, least_kept)
+    correction = None if readout is None else _correction(plan, readout, post_select)
+    least = float(readout is None) / 2 if least_kept is None else least_kept
+    kept = check_sector(counts, plan.electrons, least)
     consistency = check_reading(OccupationFit.of(plan, counts))
-    select = plan.sector_exact if post_select is None else bool(post_select)
+    select = readout is None and (plan.sector_exact if post_select is None else bool(post_select))
 
-    whole = _samples(plan, counts, select=False)
+    if select:
+        check_every_circuit_keeps_shots(counts, kept, plan.electrons)
+
+    whole = _samples(plan, counts, correction=correction)
     used = _samples(plan, counts, select=True) if select and np.any(kept < counts.shots) else whole
-    bar = error_bar(used, plan.deviations)
+    extra, leak = [], None
+    if correction is not None:
+        extra = [(_calibration_variance(plan, counts, correction), correction.degrees_of_freedom)]
+        leak, consistency = _sector_leak(plan, counts, correction), None
+    bar = error_bar(used, plan.deviations, extra=extra)
     energy = plan.constant + sum(sample.mean for sample in used)
     raw = None
     if used is not whole:
         raw = (plan.constant + sum(s.mean for s in whole), error_bar(whole, plan.deviations).standard_error)
     half = bar.half_width(confidence)
-    findings = _findings(used, plan.deviations, consistency)
+    findings = _leak_findings(plan, leak) if leak else _findings(used, plan.deviations, consistency)
     shots = np.array([sample.shots for sample in used], dtype=np.int64)
     shots.setflags(write=False)
     return Estimate(
@@ -194,24 +216,87 @@ def estimate(
         discarded=float(1.0 - np.sum(kept) / counts.total_shots),
         discarded_by_circuit=frozen(1.0 - kept / counts.shots),
         without_post_selection=raw,
+        calibration_error=float(np.sqrt(extra[0][0])) if extra else None,
+        sector_leak=leak,
         consistency=consistency,
         agrees=not findings,
         message=" ".join(findings),
     )
 
 
-def _samples(plan: Plan, counts: Counts, *, select: bool) -> list[Sample]:
-    return [
-        _sample(fragment, bits, numbers, plan.electrons if select else None)
+def _samples(plan: Plan, counts: Counts, *, select: bool = False, correction: Correction | None = None) -> list[Sample]:
+    samples = []
+    for fragment, bits, numbers in zip(plan.fragments, counts.bits, counts.numbers, strict=True):
+        if select:
+            keep = in_sector(bits, plan.electrons)
+            bits, numbers = bits[keep], numbers[keep]
+        values = fragment.values(bits) if correction is None else correction.values(fragment, bits)
+        samples.append(Sample.of(values, numbers))
+    return samples
+
+
+def _correction(plan: Plan, readout: ReadoutErrors, post_select: bool | None) -> Correction:
+    if not isinstance(readout, ReadoutErrors):
+        raise InputError(
+            f"`readout` must be ReadoutErrors (got {type(readout).__name__}); make them with ReadoutErrors.known or "
+            "ReadoutErrors.from_calibration"
+        )
+    if readout.orbitals != plan.orbitals:
+        raise MismatchError(
+            f"`readout` must be for {2 * plan.orbitals} qubits (got {2 * readout.orbitals}); "
+            "calibrate the plan's qubits"
+        )
+    if post_select:
+        raise InputError(
+            "`post_select` must be False or left out together with `readout` (got True): among shots chosen by their "
+            "misread electron numbers the errors of different qubits are no longer independent, and the correction "
+            "would be wrong; use one of the two"
+        )
+    return Correction.of(readout)
+
+
+def _calibration_variance(plan: Plan, counts: Counts, correction: Correction) -> float:
+    parts = [
+        correction.gradients(fragment, bits, numbers)
         for fragment, bits, numbers in zip(plan.fragments, counts.bits, counts.numbers, strict=True)
     ]
+    return correction.variance([sum(blocks) for blocks in zip(*parts, strict=True)])  # type: ignore[misc]
 
 
-def _sample(fragment: Fragment, bits: Any, numbers: Any, electrons: tuple[int, int] | None) -> Sample:
-    if electrons is not None:
-        keep = in_sector(bits, electrons)
-        bits, numbers = bits[keep], numbers[keep]
-    return Sample.of(fragment.values(bits), numbers)
+def _sector_leak(plan: Plan, counts: Counts, correction: Correction) -> tuple[float, float]:
+    """Mean and standard error of (N̂ − N)² over all circuits, corrected for readout."""
+    n, total = plan.orbitals, sum(plan.electrons)
+    twos = np.full((n, n), 2.0)
+    number = Fragment(np.eye(n), twos, twos - np.diag(np.diag(twos)), np.full(n, 1.0 - 2.0 * total))
+    shares = counts.shots / counts.total_shots
+    mean, variance = float(total**2), 0.0
+    blocks: list[Array] = [np.zeros_like(confusion) for confusion in correction.errors.confusions]
+    for share, bits, numbers in zip(shares, counts.bits, counts.numbers, strict=True):
+        sample = Sample.of(correction.values(number, bits), numbers)
+        mean += share * sample.mean
+        variance += share**2 * sample.variance / sample.shots
+        blocks = [b + share * g for b, g in zip(blocks, correction.gradients(number, bits, numbers), strict=True)]
+    return float(mean), float(np.sqrt(variance + correction.variance(blocks)))
+
+
+def _leak_findings(plan: Plan, leak: tuple[float, float]) -> list[str]:
+    mean, error = leak
+    if abs(mean) <= 4.0 * error:
+        return []
+    if mean < 0.0:
+        return [
+            f"After readout correction (N - {sum(plan.electrons)})^2 is {mean:.3g} +- {error:.2g}, which no state has: "
+            "the readout errors are not those of the calibration, or are correlated."
+        ]
+    consequence = (
+        "the plan is exact only at the right electron numbers, so the energy is biased"
+        if plan.sector_exact
+        else "the energy is that of a state with other electron numbers mixed in"
+    )
+    return [
+        f"After readout correction (N - {sum(plan.electrons)})^2 is {mean:.3g} +- {error:.2g} instead of 0: electrons "
+        f"are lost or gained before the readout, or the calibration is wrong; {consequence}."
+    ]
 
 
 def _findings(samples: list[Sample], predicted: Array, consistency: float | None) -> list[str]:

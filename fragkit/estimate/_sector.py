@@ -62,13 +62,17 @@ def check_sector(counts: Counts, electrons: tuple[int, int], least_kept: float) 
             f"most shots must have {electrons[0]} alpha and {electrons[1]} beta electrons (got {share:.0%} of "
             f"{counts.total_shots}); {cause}"
         )
+    return kept
+
+
+def check_every_circuit_keeps_shots(counts: Counts, kept: NDArray[np.int64], electrons: tuple[int, int]) -> None:
+    """Raise `InputError` if post-selection leaves a circuit without shots."""
     empty = [str(m) for m in np.flatnonzero((counts.shots > 0) & (kept == 0))]
     if empty:
         raise InputError(
             f"every circuit must keep shots with {electrons} electrons (got none in circuit {', '.join(empty)}); "
             "check how that circuit was run, or take more shots"
         )
-    return kept
 
 
 def alternative_readings(orbitals: int) -> dict[str, NDArray[np.intp]]:

@@ -45,6 +45,11 @@ def estimate_summary(estimate: "Estimate") -> list[tuple[str, str]]:
     if estimate.without_post_selection is not None:
         energy, error = estimate.without_post_selection
         pairs.append(("without discarding", f"{energy:.6f} Ha, standard error {1e3 * error:.4g} mHa"))
+    if estimate.calibration_error is not None:
+        pairs.append(("readout", f"corrected; the calibration adds {1e3 * estimate.calibration_error:.4g} mHa"))
+    if estimate.sector_leak is not None:
+        mean, error = estimate.sector_leak
+        pairs.append(("(N - electrons)^2", f"{mean:.3g} +- {error:.2g} after correction, 0 expected"))
     if estimate.consistency is not None:
         pairs.append(("one state for all circuits", f"p = {estimate.consistency:.2g}"))
     pairs.append(("agrees with the plan", "yes" if estimate.agrees else f"NO. {estimate.message}"))
