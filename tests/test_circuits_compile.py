@@ -19,11 +19,22 @@ from hypothesis import strategies as st
 from fragkit.circuits import (
     circuit_costs,
     compilation_energy_bound,
-    ordering_saving,
+    gate_saving,
     parametrised_circuit,
     rotation_circuits,
 )
-from fragkit.core import Fragment, InputError, cheapest_order, eliminate, givens_count, mesh_matrix, mesh_positions
+from fragkit.core import (
+    Fragment,
+    InputError,
+    cheapest_form,
+    cheapest_order,
+    eliminate,
+    fragment_tensors,
+    givens_count,
+    interchangeable_orbitals,
+    mesh_matrix,
+    mesh_positions,
+)
 
 LAYOUTS = ("blocked", "interleaved")
 
@@ -168,15 +179,63 @@ def test_reordered_fragment_is_the_same_operator_and_the_saving_is_reported():
     matrix = block_rotation([0, 1, 0, 1], rng)
     coefficients = rng.normal(size=(4, 4))
     fragment = Fragment.plain(matrix, coefficients + coefficients.T)
-    before, after = ordering_saving([fragment])
+    before, after = gate_saving([fragment])
     assert (before, after) == (givens_count(matrix), 3)
     new = fragment.reordered(*cheapest_order(matrix))
-    assert ordering_saving([new])[0] == after
+    assert gate_saving([new])[0] == after
     np.testing.assert_allclose(
         np.einsum("pi,qi,ij,rj,sj->pqrs", new.rotation, new.rotation, new.opposite_spin, new.rotation, new.rotation),
         np.einsum("pi,qi,ij,rj,sj->pqrs", matrix, matrix, fragment.opposite_spin, matrix, matrix),
         atol=1e-12,
     )
+
+
+GROUPS = [
+    # linear coefficients, fewest rotations: n(n−1)/2 less m(m−1)/2 for each group of m equal ones, since only the
+    # subspaces matter (dimension of the flag manifold)
+    ([1, 2, 3, 4, 5, 6], 15),
+    ([1, 0, 0, 0, 0, 0], 5),
+    ([0, 1, 0, 2, 0, 1], 15 - 3 - 1),
+    ([1, 0, 1, 0, 1, 0], 15 - 3 - 3),
+    ([1, 1, 1, 1, 1, 1], 0),
+]
+
+
+@pytest.mark.parametrize(("linear", "fewest"), GROUPS)
+def test_orbitals_that_a_fragment_does_not_tell_apart_save_rotations(linear, fewest):
+    rotation = random_rotation(6, np.random.default_rng(3))
+    fragment = Fragment.one_body(rotation, linear)
+    assert len(interchangeable_orbitals(fragment)) == len(set(linear))
+    form = cheapest_form(fragment)
+    assert givens_count(form.rotation) == fewest
+    np.testing.assert_allclose(
+        form.rotation @ np.diag(form.linear) @ form.rotation.T, rotation @ np.diag(linear) @ rotation.T, atol=1e-13
+    )
+
+
+@given(st.integers(0, 2**32 - 1), st.lists(st.integers(0, 2), min_size=2, max_size=5))
+def test_cheapest_form_is_the_same_operator(seed, labels):
+    """Coefficients that depend on the groups alone; the opposite-spin and the antisymmetrised tensors are compared."""
+    rng = np.random.default_rng(seed)
+    n = len(labels)
+    tables = rng.normal(size=(2, 3, 3))
+    opposite, same = ((t + t.T)[np.ix_(labels, labels)] for t in tables)
+    fragment = Fragment(random_rotation(n, rng), opposite, same - np.diag(np.diag(same)), rng.normal(size=3)[labels])
+    assert len(interchangeable_orbitals(fragment)) == len(set(labels))
+    form = cheapest_form(fragment)
+    before, after = gate_saving([fragment])
+    assert givens_count(form.rotation) == after <= givens_count(fragment.rotation) == before
+    assert after <= n * (n - 1) // 2 - sum(labels.count(k) * (labels.count(k) - 1) // 2 for k in set(labels))
+    made, wanted = fragment_tensors([form]), fragment_tensors([fragment])
+    np.testing.assert_allclose(made.one_body, wanted.one_body, atol=1e-12)
+    np.testing.assert_allclose(made.opposite_spin, wanted.opposite_spin, atol=1e-12)
+    np.testing.assert_allclose(made.exchange_odd, wanted.exchange_odd, atol=1e-12)
+
+
+def test_a_small_difference_between_coefficients_keeps_orbitals_apart():
+    fragment = Fragment.one_body(np.eye(3), [1.0, 1.0 + 1e-9, 0.0])
+    assert interchangeable_orbitals(fragment) == [[0], [1], [2]]
+    assert interchangeable_orbitals(fragment, tolerance=1e-8) == [[0, 1], [2]]
 
 
 @pytest.mark.parametrize("layout", LAYOUTS)

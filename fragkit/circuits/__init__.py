@@ -4,7 +4,7 @@ from fragkit.circuits._circuit import RotationCircuit as RotationCircuit
 from fragkit.circuits._cost import CircuitCosts as CircuitCosts
 from fragkit.circuits._cost import circuit_costs as circuit_costs
 from fragkit.circuits._cost import compilation_energy_bound as compilation_energy_bound
-from fragkit.circuits._cost import ordering_saving as ordering_saving
+from fragkit.circuits._cost import gate_saving as gate_saving
 from fragkit.circuits._export import export_angles as export_angles
 from fragkit.circuits._export import read_angles as read_angles
 from fragkit.circuits._frameworks import cirq_circuit as cirq_circuit

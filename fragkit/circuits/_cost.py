@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.circuits._circuit import RotationCircuit
-from fragkit.core import Fragment, InputError, TimeModel, as_real_array, cheapest_order, givens_count
+from fragkit.core import Fragment, InputError, TimeModel, as_real_array, cheapest_form, givens_count
 
 Array = NDArray[np.float64]
 
@@ -113,19 +113,17 @@ def circuit_costs(
     )
 
 
-def ordering_saving(fragments: Sequence[Fragment], *, tolerance: float = 0.0) -> tuple[int, int]:
-    """Neighbour rotations per spin of all fragments in their own order, and in the order of `cheapest_order`.
+def gate_saving(fragments: Sequence[Fragment], *, tolerance: float = 0.0) -> tuple[int, int]:
+    """Neighbour rotations per spin of all fragments as they are, and in the form of `fragkit.core.cheapest_form`.
 
-    >>> ordering_saving([Fragment.one_body([[0.0, 1.0], [1.0, 0.0]], [1.0, 2.0])])
+    Matrix elements of at most `tolerance` count as zero in both.
+
+    >>> gate_saving([Fragment.one_body([[0.0, 1.0], [1.0, 0.0]], [1.0, 2.0])])
     (1, 0)
     """
-    before = after = 0
-    for fragment in fragments:
-        rotation = fragment.rotation
-        order, _ = cheapest_order(rotation, max(tolerance, 1e-14))
-        before += givens_count(rotation, tolerance=tolerance)
-        after += givens_count(rotation[:, order], tolerance=tolerance)
-    return before, after
+    before = sum(givens_count(fragment.rotation, tolerance=tolerance) for fragment in fragments)
+    forms = [cheapest_form(fragment, tolerance) for fragment in fragments]
+    return before, sum(givens_count(form.rotation, tolerance=tolerance) for form in forms)
 
 
 def compilation_energy_bound(circuits: Sequence[RotationCircuit], fragments: Sequence[Fragment]) -> float:
