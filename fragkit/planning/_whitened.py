@@ -2,6 +2,7 @@
 
 from collections.abc import Sequence
 from itertools import pairwise
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -129,7 +130,9 @@ class WhitenedDesign:
         if not self.free_basis.shape[1]:
             return np.zeros((self.count, features))
         inside = self.free_basis @ (self.free_basis.T @ residual)
-        solution = np.asarray(lstsq(self._free_operators, inside, cond=1e-8, lapack_driver="gelsy")[0])
+        # QR with column pivoting: several times faster than singular values for a few thousand rows.
+        found: Any = lstsq(self._free_operators, inside, cond=FREE_TOLERANCE, lapack_driver="gelsy")
+        solution = np.asarray(found[0])
         ends = np.cumsum([null.shape[1] for null in self._null])
         parts = np.split(solution, ends[:-1])
         return np.stack([null @ part for null, part in zip(self._null, parts, strict=True)])
