@@ -7,6 +7,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import Hamiltonian, InputError, MismatchError, as_count, as_real_array, as_rotation, feature_count
+from fragkit.states._parallel import available_threads, in_parallel
 
 Array = NDArray[np.float64]
 Bits = NDArray[np.uint8]
@@ -119,7 +120,9 @@ class ReferenceState(ABC):
         """How many rotations to evaluate at a time, so that temporaries stay in cache."""
         return 64
 
-    def variance_and_gradient(self, rotations: Any, coefficients: Any) -> tuple[Array, Array, Array]:
+    def variance_and_gradient(
+        self, rotations: Any, coefficients: Any, *, precision: str = "double", threads: int | None = None
+    ) -> tuple[Array, Array, Array]:
         """Single-shot variances of K fragments, and their derivatives by coefficients and rotations.
 
         Parameters
@@ -128,6 +131,10 @@ class ReferenceState(ABC):
             (K, n, n) orthogonal.
         coefficients
             (K, n² + n) packed, hartree.
+        precision
+            "double", or "single" to evaluate CI vectors in half the time with about six digits.
+        threads
+            Threads over the rotations of large states; by default OMP_NUM_THREADS or the number of cores.
 
         Returns
         -------
@@ -152,13 +159,21 @@ class ReferenceState(ABC):
             raise InputError(
                 f"`rotations` must be orthogonal to 1e-6 (got a deviation of {error:.3g}); orthonormalise the columns"
             )
+        if precision not in ("double", "single"):
+            raise InputError(f'`precision` must be "double" or "single" (got {precision!r})')
+        if precision == "single":
+            turns = turns.astype(np.float32)
         variances, products = np.empty(len(turns)), np.empty_like(values)
-        gradient = np.empty_like(turns)
-        step = max(1, self._batch())
-        for start in range(0, len(turns), step):
-            part = slice(start, start + step)
+        gradient = np.empty((len(turns), n, n))
+
+        def evaluate(part: slice) -> None:
             opened = self._expectations(turns[part], values[part])
             variances[part], products[part], gradient[part] = opened.about(opened.mean)
+
+        step = self._batch()
+        parts = [slice(start, start + step) for start in range(0, len(turns), step)]
+        workers = available_threads() if threads is None else as_count(threads, "threads", minimum=1)
+        in_parallel(evaluate, parts, workers)
         return variances, products, gradient
 
     def with_noise(self, noise: float) -> "ReferenceState":

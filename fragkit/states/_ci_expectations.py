@@ -52,15 +52,17 @@ class CIExpectations(Expectations):
 
         opposite, same, linear = unpack_features(coefficients, n)
         single = pack_features(np.zeros_like(same), same, linear)[:, -alpha.features.shape[1] :]
-        row_values = _with_columns((alpha.occupations @ opposite), single @ alpha.features.T, None, kind)
-        column_values = _with_columns(
-            np.broadcast_to(beta.occupations, (len(rotations), *beta.occupations.shape)),
-            None,
-            single @ beta.features.T,
-            kind,
-        )
+        towards_beta = alpha.occupations @ opposite
+        at_alpha, at_beta = single @ alpha.features.T, single @ beta.features.T
+        # Values are kept relative to their mean in the leading product of factors, so that few digits cancel.
+        chief = int(np.argmax(np.abs(factored.scale)))
+        x, y = (side[:, :, chief].astype(np.float64) ** 2 for side in (self._left, self._right))
+        self._offset = np.vecdot(x, at_alpha) + np.vecdot(y, at_beta)
+        self._offset += np.vecdot(np.vecmat(x, towards_beta), y @ beta.occupations)
+        row_values = _table(kind, towards_beta, at_alpha - self._offset[:, None], 1.0, len(rotations))
+        column_values = _table(kind, beta.occupations, 1.0, at_beta, len(rotations))
 
-        step = max(1, min(alpha.count, _BLOCK // beta.count))
+        step = max(1, min(alpha.count, _BLOCK // (beta.count * len(rotations))))
         scaled = self._left * self._scale
         right, columns = self._right.swapaxes(1, 2), column_values.swapaxes(1, 2)
         self._blocks = []
@@ -73,7 +75,7 @@ class CIExpectations(Expectations):
             block = _Block(start, stop, first, vector, values)
             self._blocks.append(block)
             total += self._weighted_dot(block, values * vector, vector)
-        self.mean = total
+        self.mean = total + self._offset
 
     def _weighted_dot(self, block: _Block, x: Array, y: Array) -> Array:
         """Σ x y over the block and its mirror image."""
@@ -88,10 +90,11 @@ class CIExpectations(Expectations):
         alpha, beta, symmetric = self._alpha, self._beta, self._symmetric
         count, n = len(center), alpha.orbitals
         kind = self._left.dtype
-        shift = center.astype(kind)[:, None, None]
+        shift = (center - self._offset).astype(kind)[:, None, None]
         rows = alpha.occupations.astype(kind)
         columns = np.hstack([beta.occupations, np.ones((beta.count, 1))]).astype(kind)
 
+        ones = np.ones(alpha.count, dtype=kind)
         second = np.zeros(count)
         cross = np.zeros((count, n, n))
         at_alpha, at_beta = np.zeros((count, alpha.count)), np.zeros((count, beta.count))
@@ -108,14 +111,14 @@ class CIExpectations(Expectations):
                 outside = weighted[:, :, d:] @ columns[block.stop :]
                 cross += rows[here].T @ (inside + 2.0 * outside)[:, :, :n]
                 at_alpha[:, here] += inside[:, :, n] + outside[:, :, n]
-                at_alpha[:, block.stop :] += weighted[:, :, d:].sum(axis=1)
+                at_alpha[:, block.stop :] += ones[:d] @ weighted[:, :, d:]
                 tilted_alpha[:, here] += tilted @ self._left[:, block.start :]
                 tilted_alpha[:, block.stop :] += tilted[:, :, d:].swapaxes(1, 2) @ self._left[:, here]
             else:
                 inside = weighted @ columns
                 cross += rows[here].T @ inside[:, :, :n]
                 at_alpha[:, here] = inside[:, :, n]
-                at_beta += weighted.sum(axis=1)
+                at_beta += ones[:d] @ weighted
                 tilted_alpha[:, here] = tilted @ self._right
                 tilted_beta += tilted.swapaxes(1, 2) @ self._left[:, here]
 
@@ -131,15 +134,13 @@ class CIExpectations(Expectations):
         return second, np.concatenate([packed, single], axis=1), gradient
 
 
-def _with_columns(table: Array, second_last: Array | None, last: Array | None, kind: np.dtype) -> Array:
-    """Append two columns to (K, strings, n); ones where None. The row and column tables' product is f."""
-    count, rows, n = table.shape
-    result = np.ones((count, rows, n + 2), dtype=kind)
+def _table(kind: np.dtype, table: Array, second_last: Array | float, last: Array | float, count: int) -> Array:
+    """(count, strings, n + 2): `table` and two more columns. The product of the two spins' tables is f."""
+    n = table.shape[-1]
+    result = np.empty((count, table.shape[-2], n + 2), dtype=kind)
     result[:, :, :n] = table
-    if second_last is not None:
-        result[:, :, n] = second_last
-    if last is not None:
-        result[:, :, n + 1] = last
+    result[:, :, n] = second_last
+    result[:, :, n + 1] = last
     return result
 
 
@@ -148,10 +149,13 @@ def _antisymmetric_transition(left: Array, right: Array, spin: Strings) -> Array
     n = spin.orbitals
     if spin.electrons in (0, n):
         return np.zeros((len(left), n, n))
-    rank, sign = spin.ladder
-    signs = sign.astype(left.dtype)[:, None]
     # Below half filling ⟨a_p left|a_q right⟩; above it −⟨a†_q left|a†_p right⟩, which has fewer strings.
-    bras = (left[:, rank] * signs).reshape(len(left), n, -1)
-    kets = (right[:, rank] * signs).reshape(len(left), n, -1)
+    bras, kets = (_ladder(vectors, spin).reshape(len(left), n, -1) for vectors in (left, right))
     transition = (bras @ kets.swapaxes(1, 2)).astype(np.float64)
     return 2.0 * (transition - transition.swapaxes(1, 2))
+
+
+def _ladder(vectors: Array, spin: Strings) -> Array:
+    """All a_p (or a†_p) on vectors (K, strings, R): one gather from the vectors, their negatives and a zero row."""
+    zero = np.zeros_like(vectors[:, :1])
+    return np.concatenate([vectors, -vectors, zero], axis=1).take(spin.ladder, axis=1)

@@ -9,7 +9,7 @@ from fragkit.states._ci import CIState
 from fragkit.states._hamiltonian_action import Array, hamiltonian_action
 from fragkit.states._strings import strings
 
-_RESIDUAL = 1e-6  # |(H − E)v| at which a solution counts as converged, hartree; its energy error is about 1e-12
+_RESIDUAL = 1e-7  # |(H − E)v| at which a solution counts as converged, hartree; its energy error is about 1e-14
 _DENSE = 400  # largest space that is diagonalised as a matrix
 
 
@@ -64,7 +64,7 @@ def _ground_state(hamiltonian: Hamiltonian, allowed: np.ndarray | None, name: st
 
     if len(diagonal) <= _DENSE:
         matrix = np.array([project(row) for row in np.eye(len(diagonal))])
-        vector = np.linalg.eigh(0.5 * (matrix + matrix.T))[1][:, 0]
+        vector = _purified(expand(np.linalg.eigh(0.5 * (matrix + matrix.T))[1][:, 0]), electrons)[mask]
         image = project(vector)
     else:
         start = np.zeros(len(diagonal))
@@ -88,7 +88,7 @@ def _ground_state(hamiltonian: Hamiltonian, allowed: np.ndarray | None, name: st
             verbose=0,
         )
         vector = np.asarray(vectors[0])
-        vector /= np.linalg.norm(vector)
+        vector = _purified(expand(vector), electrons)[mask]
         image = project(vector)
     energy = float(vector @ image)
     residual = float(np.linalg.norm(image - energy * vector))
@@ -110,3 +110,13 @@ def _ground_state(hamiltonian: Hamiltonian, allowed: np.ndarray | None, name: st
         converged=converged,
         message=message,
     )
+
+
+def _purified(vector: Array, electrons: tuple[int, int]) -> Array:
+    """Normalised, and exactly symmetric under exchange of the spins when it is so up to the solver's noise.
+
+    States of even total spin with equal electron numbers are symmetric matrices, which halves the work on them.
+    """
+    if electrons[0] == electrons[1] and np.linalg.norm(vector - vector.T) < 1e-5 * np.linalg.norm(vector):
+        vector = 0.5 * (vector + vector.T)
+    return vector / np.linalg.norm(vector)

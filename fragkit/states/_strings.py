@@ -136,26 +136,24 @@ class Strings:
         return table
 
     @cached_property
-    def ladder(self) -> tuple[Index, Array]:
+    def ladder(self) -> Index:
         """What one annihilator (below half filling) or one creator (above) does, for all n operators in turn.
 
         For operator p and each string I of one electron less (or more): the rank of the string that a_p (a†_p) takes to
-        I, and the sign; sign 0 and rank 0 where there is none. Both have length n × (number of strings I).
+        +I, `count` plus the rank of the one it takes to −I, or 2 · `count` where there is none.
         """
         n, k = self.orbitals, self.electrons
         creates = 2 * k > n
-        reached = strings(n, k + 1 if creates else k - 1)
-        bits = reached.occupations.astype(np.intp)
-        numbers = bits @ (1 << np.arange(n, dtype=np.intp))
-        own = self.occupations.astype(np.intp) @ (1 << np.arange(n, dtype=np.intp))
+        bits = strings(n, k + 1 if creates else k - 1).occupations.astype(np.intp)
+        powers = 1 << np.arange(n, dtype=np.intp)
+        reached, own = bits @ powers, self.occupations.astype(np.intp) @ powers
         below = np.cumsum(bits, axis=1) - bits
-        ranks, signs = [], []
+        table = []
         for p in range(n):
             allowed = bits[:, p] == (1 if creates else 0)
-            source = numbers - (1 << p) if creates else numbers + (1 << p)
-            ranks.append(np.where(allowed, np.searchsorted(own, np.where(allowed, source, own[0])), 0))
-            signs.append(np.where(allowed, (-1.0) ** below[:, p], 0.0))
-        return np.concatenate(ranks), np.concatenate(signs)
+            source = np.searchsorted(own, np.where(allowed, reached - powers[p] if creates else reached + powers[p], 0))
+            table.append(np.where(allowed, source + self.count * (below[:, p] % 2), 2 * self.count))
+        return np.concatenate(table)
 
 
 @lru_cache(maxsize=64)

@@ -87,7 +87,7 @@ class WickState(ReferenceState, ABC):
 
     def _batch(self) -> int:
         # The largest temporary has n³ entries per rotation.
-        return max(1, 200_000 // self.orbitals**3)
+        return max(1, 80_000 // self.orbitals**3)
 
 
 def _determinantal_sample(density: Array, shots: int, generator: np.random.Generator) -> Bits:
