@@ -1,0 +1,258 @@
+"""Rotations, coefficients and shot shares of least variance together, at a given number of circuits."""
+
+import os
+import time
+from dataclasses import dataclass
+from typing import Any, Literal, get_args
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fragkit.core import Hamiltonian, InputError, as_count, as_positive
+from fragkit.planning._design_map import DesignMap
+from fragkit.planning._lagrangian_refresh import Covariances
+from fragkit.planning._rotations_file import RotationsFile
+from fragkit.planning._rotations_run import Run
+from fragkit.planning._rotations_start import starting_rotations
+from fragkit.states import ReferenceState
+
+Array = NDArray[np.float64]
+OnInterrupt = Literal["raise", "return"]
+
+RIDGE = 1e-5
+WINDOW = 200  # evaluations over which the fall of the cost is judged
+TRIAL = 300  # evaluations that every start gets before the best goes on alone
+
+
+@dataclass(frozen=True, eq=False)
+class RotationDesign:
+    """Rotations with exact coefficients, the best that an optimisation found.
+
+    Parameters
+    ----------
+    rotations
+        (K, n, n); columns are the new orbitals.
+    coefficients
+        (K, n² + n) packed features, hartree. They reproduce the Hamiltonian up to operators that are constant in the
+        sector of its electron numbers, to `infeasibility`.
+    shares
+        (K,) fractions of the shots, σ/Σσ.
+    cost
+        (Σσ)² in hartree² on the regularised reference.
+    cost_history
+        (refreshes, 2) evaluations spent and cost at each exact refresh, of the start that was followed to the end.
+    infeasibility
+        Norm of Hamiltonian minus fragments over the norm of the Hamiltonian, as operator rows without the shifts.
+    evaluations, seconds
+        Evaluations of the Lagrangian, of all starts together, and the time they took.
+    converged, message
+        Whether the cost had settled to the tolerance, in words.
+    """
+
+    rotations: Array
+    coefficients: Array
+    shares: Array
+    cost: float
+    cost_history: Array
+    infeasibility: float
+    evaluations: int
+    seconds: float
+    converged: bool
+    message: str
+
+
+def least_count(orbitals: int) -> int:
+    """Fewest generic rotations that reproduce every Hamiltonian of n orbitals, ⌈(n+1)(n+2)/4⌉.
+
+    Modulo operators that are constant in the sector each brings n(n−1)/2 new opposite-spin rows.
+
+    >>> [least_count(n) for n in (2, 6, 7, 8, 10, 12)]
+    [3, 14, 18, 23, 33, 46]
+    """
+    return -(-(orbitals + 1) * (orbitals + 2) // 4)
+
+
+def optimise_rotations(
+    hamiltonian: Hamiltonian,
+    state: ReferenceState,
+    count: int,
+    *,
+    start: Any = None,
+    starts: int = 1,
+    rng: np.random.Generator | int | None = 0,
+    tolerance: float = 5e-3,
+    max_evaluations: int = 4000,
+    ridge: float = RIDGE,
+    progress: bool = False,
+    checkpoint: str | os.PathLike[str] | None = None,
+    resume: bool = False,
+    on_interrupt: OnInterrupt = "raise",
+) -> RotationDesign:
+    """Find rotations, coefficients and shot shares with the least cost (Σσ)², exact at every refresh.
+
+    Minimises over K rotations and their coefficients together, by an augmented Lagrangian with quasi-Newton steps on
+    the orthogonal group. Shot shares and operators that are constant in the sector are eliminated in closed form.
+    Every 60 steps or so (120 for many orbitals) the coefficients are solved for exactly; the best of these is
+    returned. The problem has many local minima, which differ by some per cent.
+
+    Parameters
+    ----------
+    hamiltonian
+        What the fragments must sum to.
+    state
+        Whose variances count. A little noise in it (1e-3 is a robust choice) keeps the plan good on states that
+        differ from it.
+    count
+        Number of circuits K, at least (n+1)(n+2)/4 (`least_count`); two more is a good choice.
+    start
+        None for random rotations, "low-rank", a `Fragmentation`, or rotations (at most K, n, n); missing ones are
+        random.
+    starts
+        Independent starts; each gets a trial, the best goes on. From the second on all rotations are random.
+    rng
+        Seed or generator of the starts; the same seed gives the same result on the same machine.
+    tolerance
+        Converged when the cost fell by less than this fraction over the last 200 evaluations.
+    max_evaluations
+        Most evaluations of the Lagrangian, all starts together.
+    ridge
+        Variance added to every feature (dimensionless), which bounds the coefficients. 3e-4 with little noise in the
+        state makes up for a reference such as CISD in place of the true state.
+    progress
+        Show a bar with the cost.
+    checkpoint
+        File (.npz) that keeps the best rotations so far, written every 20 seconds or so and at the end.
+    resume
+        Go on from `checkpoint`.
+    on_interrupt
+        What Ctrl-C does: "raise" lets KeyboardInterrupt through, "return" gives the best so far, not converged.
+
+    Raises
+    ------
+    InputError
+        If an argument is not what it must be, or `count` is too small to reproduce the Hamiltonian.
+    MismatchError
+        If the checkpoint belongs to another problem.
+
+    Examples
+    --------
+    >>> import numpy as np
+    >>> from fragkit.core import Hamiltonian
+    >>> from fragkit.states import reference_state
+    >>> on_site = np.zeros((2, 2, 2, 2))
+    >>> on_site[0, 0, 0, 0] = on_site[1, 1, 1, 1] = 4.0
+    >>> ham = Hamiltonian(0.0, np.array([[0.0, -1.0], [-1.0, 0.0]]), on_site, electrons=(1, 1))
+    >>> design = optimise_rotations(ham, reference_state(ham, "fci", noise=1e-3), 3)
+    >>> bool(design.infeasibility < 1e-10)
+    True
+    """
+    count = as_count(count, "count", minimum=1)
+    starts = as_count(starts, "starts", minimum=1)
+    limit = as_count(max_evaluations, "max_evaluations", minimum=1)
+    tolerance = as_positive(tolerance, "tolerance")
+    if not isinstance(ridge, float | int) or not 0.0 <= ridge < np.inf:
+        raise InputError(f"`ridge` must be a number of at least 0 (got {ridge!r})")
+    if on_interrupt not in get_args(OnInterrupt):
+        raise InputError(f"`on_interrupt` must be 'raise' or 'return' (got {on_interrupt!r})")
+    n = hamiltonian.orbitals
+    began = time.perf_counter()
+    generator = np.random.default_rng(rng)
+    file = None if checkpoint is None else RotationsFile(checkpoint, hamiltonian.digest, state.digest)
+    if resume and file is None:
+        raise InputError("`checkpoint` must be given when `resume` is True (got None)")
+    if file is not None and not resume and file.path.exists():
+        raise InputError(
+            f"`checkpoint` must not exist yet (got {str(checkpoint)!r}); go on from it with resume=True, or remove it"
+        )
+    spent, shares = 0, None
+    if resume and file is not None:
+        first, shares, spent = file.read(count, n)
+        starts = 1
+    else:
+        first = starting_rotations(hamiltonian, count, start, generator)
+
+    design = DesignMap(hamiltonian)
+    covariances = Covariances(state, design, float(ridge))
+    bar = _Bar(progress, limit)
+    runs: list[Run] = []
+    interrupted = settled = False
+    try:
+        runs.append(Run(design, covariances, first, shares))
+        for number in range(1, starts):
+            other = starting_rotations(hamiltonian, count, None, generator)
+            runs.append(Run(design, covariances, other))
+            for run in runs[number - 1 :]:
+                _advance(run, min(TRIAL, limit // starts), bar)
+        runs.sort(key=lambda run: run.best.cost)
+        spent += sum(run.evaluations for run in runs[1:])
+        run = runs[0]
+        while not settled and not run.stuck and run.evaluations + spent < limit:
+            run.cycle(run.natural_steps, bar.show)
+            fall = run.recent_fall(WINDOW)
+            settled = fall is not None and fall < tolerance
+            if file is not None:
+                file.write_when_due(run.best.rotations, run.best.shares, run.evaluations + spent)
+    except KeyboardInterrupt:
+        if on_interrupt == "raise" or not runs:
+            raise
+        interrupted = True
+        runs.sort(key=lambda run: run.best.cost)
+    finally:
+        bar.close()
+        if file is not None and runs:
+            best = min(runs, key=lambda run: run.best.cost).best
+            file.write(best.rotations, best.shares, spent + runs[0].evaluations)
+    best = runs[0].best
+    total = spent + runs[0].evaluations
+    return RotationDesign(
+        rotations=best.rotations,
+        coefficients=best.coefficients,
+        shares=best.shares,
+        cost=best.cost,
+        cost_history=np.array(runs[0].history),
+        infeasibility=best.infeasibility,
+        evaluations=total,
+        seconds=time.perf_counter() - began,
+        converged=settled,
+        message=_message(runs[0], total, settled, interrupted, tolerance),
+    )
+
+
+def _advance(run: Run, evaluations: int, bar: "_Bar") -> None:
+    while run.evaluations < evaluations and not run.stuck:
+        run.cycle(run.natural_steps, bar.show)
+
+
+def _message(run: Run, evaluations: int, settled: bool, interrupted: bool, tolerance: float) -> str:
+    if settled:
+        return f"The cost fell by less than {tolerance:g} in the last {WINDOW} evaluations, {evaluations} in all."
+    fall = run.recent_fall(WINDOW)
+    rate = "" if fall is None else f"; it fell by {fall:.2g} (relative) in the last {WINDOW}"
+    if interrupted:
+        return f"Interrupted after {evaluations} evaluations at a cost of {run.best.cost:.4g} Ha^2{rate}."
+    if run.stuck:
+        return f"No further progress after {evaluations} evaluations{rate}; try another seed or more circuits."
+    return f"The cost was still falling after {evaluations} evaluations{rate}; raise `max_evaluations` to go on."
+
+
+class _Bar:
+    """A progress bar, or nothing."""
+
+    def __init__(self, shown: bool, total: int) -> None:
+        self._bar: Any = None
+        self._done = 0
+        if shown:
+            from tqdm.auto import tqdm
+
+            self._bar = tqdm(total=total, unit="eval", desc="rotations")
+
+    def show(self, evaluations: int, cost: float) -> None:
+        """One more evaluation at this cost."""
+        if self._bar is not None:
+            self._bar.set_postfix_str(f"cost {cost:.4g} Ha^2", refresh=False)
+            self._bar.update(evaluations)
+
+    def close(self) -> None:
+        """End the bar."""
+        if self._bar is not None:
+            self._bar.close()

@@ -1,0 +1,130 @@
+"""One descent of the Lagrangian: stretches of quasi-Newton steps between exact refreshes."""
+
+from collections.abc import Callable
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fragkit.planning._design_map import DesignMap
+from fragkit.planning._lagrangian import Lagrangian, Point
+from fragkit.planning._lagrangian_refresh import Covariances, Refresh, refresh
+from fragkit.planning._rotations_memory import Memory
+
+Array = NDArray[np.float64]
+
+MEMORY = 100
+LARGEST_TURN = 0.5  # radian, of one step between two orbitals
+MULTIPLIER_INTERVAL = 15  # steps between updates of the multipliers
+FIRST_PENALTY = 1.5  # κ; the multipliers converge for κ above about 1/2, the steps are longer for small κ
+LARGEST_PENALTY = 50.0
+SMALL = 1200  # rows up to which a refresh is cheap beside the steps between two of them
+
+
+class Run:
+    """The state of one descent; `best` is the refresh of lowest cost so far, always exact."""
+
+    def __init__(
+        self, design: DesignMap, covariances: Covariances, rotations: Array, shares: Array | None = None
+    ) -> None:
+        self._design = design
+        self._covariances = covariances
+        count, n = len(rotations), design.orbitals
+        weights = np.full(count, 1.0 / count) if shares is None else shares
+        self.current = self.best = refresh(design, covariances, rotations, weights, iterations=4)
+        self._memory = Memory(MEMORY, count * (n * (n - 1) // 2 + design.features.shape[1]))
+        self._penalty = FIRST_PENALTY
+        self.evaluations = 0
+        self.history: list[tuple[int, float]] = [(0, self.best.cost)]
+        self.stuck = False
+
+    @property
+    def natural_steps(self) -> int:
+        """Steps until the next refresh: few while the scaling changes fast, more where a refresh is dear."""
+        longest = 60 if self._design.space.size < SMALL else 120
+        return min(longest, 20 + 10 * (len(self.history) - 1))
+
+    def recent_fall(self, window: int) -> float | None:
+        """Relative fall of the best cost over the last `window` evaluations, or None while there were fewer."""
+        earlier = [cost for spent, cost in self.history if spent <= self.evaluations - window]
+        return 1.0 - self.best.cost / min(earlier) if earlier else None
+
+    def cycle(self, steps: int, report: Callable[[int, float], None]) -> None:
+        """Take up to `steps` steps, then refresh. `report` gets new evaluations and the cost of the last refresh."""
+        lagrangian = Lagrangian(self._design, self._covariances, self.current, self._penalty)
+        end = self._descend(lagrangian, steps, report)
+        rotations = _orthonormal(end.rotations)
+        deviations = np.sqrt(np.maximum(end.moments[0], 0.0))
+        iterations = 2 if self._design.space.size < SMALL else 1
+        weights = deviations / deviations.sum()
+        new = refresh(self._design, self._covariances, rotations, weights, iterations=iterations)
+        self.history.append((self.evaluations, new.cost))
+        if new.cost > 1.02 * self.best.cost:
+            # Too soft a penalty lets rotations run ahead of feasibility.
+            self.stuck = self._penalty >= LARGEST_PENALTY
+            self._penalty = min(2.0 * self._penalty, LARGEST_PENALTY)
+            self.current = self.best
+            self._memory.clear()
+            return
+        self._carry_over(self.current, new)
+        self.current = new
+        if new.cost < self.best.cost:
+            self.best = new
+
+    def _descend(self, lagrangian: Lagrangian, steps: int, report: Callable[[int, float], None]) -> Point:
+        base = self.current
+        dual = base.dual
+        point = lagrangian.evaluate(base.rotations, base.scaled, dual)
+        self.evaluations += 1
+        for number in range(1, steps + 1):
+            direction = self._memory.direction(point.gradient)
+            slope = float(direction @ point.gradient)
+            if slope >= 0.0:
+                self._memory.clear()
+                direction = self._memory.direction(point.gradient)
+                slope = float(direction @ point.gradient)
+            if slope == 0.0:
+                break
+            length = min(1.0, LARGEST_TURN / max(lagrangian.largest_turn(direction), 1e-300))
+            for _ in range(10):
+                new = lagrangian.evaluate(*lagrangian.step(point, length * direction), dual)
+                self.evaluations += 1
+                report(1, base.cost)
+                rise = new.value - point.value
+                if rise <= 1e-4 * length * slope:
+                    break
+                # Minimum of the parabola through the two values and the slope.
+                curved = rise - length * slope
+                fitted = -0.5 * length * slope / curved if np.isfinite(curved) and curved > 0 else 0.1
+                length *= min(0.5, max(0.1, fitted))
+            else:
+                break
+            self._memory.add(length * direction, new.gradient - point.gradient)
+            point = new
+            if number % MULTIPLIER_INTERVAL == 0:
+                dual = dual + point.multiplier_step
+                point = lagrangian.evaluate(point.rotations, point.scaled, dual, point.moments)
+        return point
+
+    def _carry_over(self, old: Refresh, new: Refresh) -> None:
+        """Change the variables of the memory from one scaling to the next."""
+        count, features = old.scaled.shape
+        forward = new.unscale @ old.scale  # z_new = forward z_old
+        backward = (old.unscale @ new.scale).transpose(0, 2, 1)  # gradients go the other way
+        ratio = (old.steps / new.steps)[:, None]
+        turns = self._memory.variables - count * features
+
+        def mapped(rows: Array, ratios: Array, blocks: Array) -> Array:
+            turned = rows[:, :turns].reshape(len(rows), count, -1) * ratios
+            mixed = np.matmul(rows[:, turns:].reshape(len(rows), count, features).transpose(1, 0, 2), blocks)
+            return np.concatenate([turned.reshape(len(rows), -1), mixed.transpose(1, 0, 2).reshape(len(rows), -1)], 1)
+
+        self._memory.transform(
+            lambda rows: mapped(rows, ratio, forward.transpose(0, 2, 1)),
+            lambda rows: mapped(rows, 1.0 / ratio, backward.transpose(0, 2, 1)),
+        )
+
+
+def _orthonormal(rotations: Array) -> Array:
+    """The same rotations with the rounding errors of many steps taken out (one Newton-Schulz step)."""
+    n = rotations.shape[-1]
+    return rotations @ (1.5 * np.eye(n) - 0.5 * rotations.transpose(0, 2, 1) @ rotations)
