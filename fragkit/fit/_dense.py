@@ -66,7 +66,7 @@ def jacobian_of(point: Point) -> Array:
     rows, columns = pair_indices(n)
     a, b = pair_indices(n, strict=True)
     size = len(rows)
-    occupation = np.ascontiguousarray(point.pairs.reshape(size, count, n).transpose(1, 2, 0))
+    occupation = point.pairs
     orbitals = np.ascontiguousarray(point.rotations.transpose(0, 2, 1))
     left, right = np.empty((count, n * n, size)), np.empty((count, n * n, size))
     left[:, :size] = occupation[:, rows] * pair_weights(n)[:, None]

@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import pair_indices
-from fragkit.fit._pairs import occupation_pairs, pair_weights
+from fragkit.fit._pairs import occupation_pairs, pair_positions, pair_weights
 
 Array = NDArray[np.float64]
 
@@ -43,7 +43,7 @@ def diagonalise(
     """
     n = starts.shape[-1]
     planes = [_Plane(n, a, b) for a in range(n) for b in range(a + 1, n)]
-    diagonal = _pair_positions(n)[np.arange(n), np.arange(n)]
+    diagonal = pair_positions(n)[np.arange(n), np.arange(n)]
     orbitals = starts.copy()
     local = _rotated(tensor, orbitals)
     gains = _gain(local, diagonal)
@@ -69,7 +69,7 @@ class _Plane:
     """Where the pairs that involve orbitals a and b are, and how a rotation of the two acts on them."""
 
     def __init__(self, n: int, a: int, b: int) -> None:
-        position = _pair_positions(n)
+        position = pair_positions(n)
         others = np.array([p for p in range(n) if p not in (a, b)], dtype=np.intp)
         self.a, self.b = a, b
         self.aa, self.bb, self.ab = position[a, a], position[b, b], position[a, b]
@@ -128,13 +128,6 @@ def _best_angle(alpha: Array, beta: Array, d: Array, e: Array) -> Array:
         step = np.where(bend < 0.0, -slope / np.where(bend < 0.0, bend, -1.0), 0.0)
         angle = angle + np.clip(step, -0.2, 0.2)
     return np.remainder(angle + np.pi, 2.0 * np.pi) - np.pi
-
-
-def _pair_positions(n: int) -> NDArray[np.intp]:
-    position = np.zeros((n, n), dtype=np.intp)
-    rows, columns = pair_indices(n)
-    position[rows, columns] = position[columns, rows] = np.arange(len(rows))
-    return position
 
 
 def _gain(local: Array, diagonal: NDArray[np.intp]) -> Array:

@@ -24,6 +24,16 @@ def pair_weights(orbitals: int) -> Array:
     return weights
 
 
+@lru_cache(maxsize=64)
+def pair_positions(orbitals: int) -> NDArray[np.intp]:
+    """Where the pair of orbitals p and q is in the packed order, (n, n) symmetric, read-only."""
+    positions = np.zeros((orbitals, orbitals), dtype=np.intp)
+    rows, columns = pair_indices(orbitals)
+    positions[rows, columns] = positions[columns, rows] = np.arange(len(rows))
+    positions.setflags(write=False)
+    return positions
+
+
 def pack_symmetric(matrices: Array) -> Array:
     """Vectors (…, P) of symmetric matrices (…, n, n); lengths are kept."""
     n = matrices.shape[-1]
