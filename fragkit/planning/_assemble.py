@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Fragment, Hamiltonian, cheapest_order
+from fragkit.core import Fragment, Hamiltonian, cheapest_form
 from fragkit.planning._budget import Budget
 from fragkit.planning._cost import fragment_deviations
 from fragkit.planning._exact import Weighting
@@ -32,10 +32,10 @@ def assemble(
 ) -> Plan:
     """A plan whose error is predicted in `state` and whose shots are shared as `planned_on` asks (`state` if None).
 
-    With `reorder` the orbitals of each fragment are listed in the order that is cheapest to compile. `promises` are
+    With `reorder` each fragment is brought to the form that is cheapest to compile. `promises` are
     the remaining fields of the plan.
     """
-    ordered = [f.reordered(*cheapest_order(f.rotation)) for f in fragments] if reorder else list(fragments)
+    ordered = [cheapest_form(f) for f in fragments] if reorder else list(fragments)
     deviations = fragment_deviations(ordered, state)
     guide = deviations if planned_on is None else fragment_deviations(ordered, planned_on)
     plan = with_shots(hamiltonian, ordered, budget, deviations, guide, reference=state.description, **promises)
