@@ -158,10 +158,20 @@ class Plan:
             )
 
     def circuits(self, **options: Any) -> "list[RotationCircuit]":
-        """The rotation circuits, one per fragment; options as for `fragkit.circuits.rotation_circuits`."""
+        """The rotation circuits, one per fragment; options as for `fragkit.circuits.rotation_circuits`.
+
+        The electron numbers are the plan's, and exported files name the plan, the Hamiltonian and the shots.
+        """
         from fragkit.circuits import rotation_circuits
 
-        return rotation_circuits(self.fragments, **options)
+        notes = {
+            "circuit": [f"{k} of 0 ... {len(self) - 1}" for k in range(len(self))],
+            "shots": [str(shots) for shots in self.shots],
+            "plan digest": self.digest,
+            "Hamiltonian digest": self.hamiltonian_digest,
+        }
+        notes |= options.pop("provenance", None) or {}
+        return rotation_circuits(self.fragments, **{"electrons": self.electrons, "provenance": notes} | options)
 
     def estimate(self, counts: Any, **options: Any) -> "Estimate":
         """Energy and standard error from counts; options as for `fragkit.estimate.estimate`."""
