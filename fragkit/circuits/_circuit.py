@@ -46,7 +46,7 @@ class RotationCircuit:
     signs
         (2n,) of ±1: what the gates leave on the new spin-orbitals; a readout does not see it.
     dropped
-        How many rotations more the circuit would have with an `angle_tolerance` of zero.
+        Number of matrix elements above rounding that were not cleared because of `angle_tolerance`.
     angle_tolerance
         Radian.
     distribution_bound
@@ -112,7 +112,7 @@ class RotationCircuit:
         """The rotation of the spin-orbitals (2n, 2n) rebuilt from the gates, blocked order, signs included.
 
         Rows are the spin-orbitals of the prepared state, columns the new ones as the bits read them. It equals the
-        block-diagonal matrix of `rotation` twice, to rounding if `angle_tolerance` is zero.
+        block-diagonal matrix of `rotation` twice, to rounding if `dropped` is zero.
         """
         places = [a for layer in self.givens for a, _, _ in layer]
         angles = [theta for layer in self.givens for _, _, theta in layer]
@@ -144,7 +144,7 @@ class RotationCircuit:
         return qiskit_circuit(self, measure=measure)
 
     def __repr__(self) -> str:
-        approximate = f", distribution_bound={self.distribution_bound:.2g}" if self.angle_tolerance else ""
+        approximate = f", distribution_bound={self.distribution_bound:.2g}" if self.dropped else ""
         return (
             f"RotationCircuit({self.qubit_count} qubits, {self.layout}, {self.givens_count} rotations in "
             f"{self.depth} layers, {self.two_qubit_gates} CNOT{approximate})"

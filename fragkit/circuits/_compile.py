@@ -7,7 +7,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.circuits._circuit import Givens, Layers, Layout, line_places
-from fragkit.core import best_column_order, eliminate, mesh_matrix, mesh_positions
+from fragkit.core import best_column_order, elimination, mesh_matrix, mesh_positions
 
 Array = NDArray[np.float64]
 Order = NDArray[np.intp]
@@ -19,13 +19,14 @@ class LineAngles:
     """Angles at every position of the full mesh on the line, zero where no gate is needed.
 
     Blocked: the mesh of each spin register, alpha first. Interleaved: the mesh of the line of 2n places.
-    `readout` and `signs` are as in `RotationCircuit`.
+    `readout`, `signs` and `dropped` are as in `RotationCircuit`.
     """
 
     positions: tuple[int, ...]
     angles: Array
     readout: tuple[int, ...]
     signs: Array
+    dropped: int
 
 
 def readout_order(rotation: Array, layout: Layout, readout: Readout, tolerance: float) -> Order:
@@ -56,14 +57,14 @@ def line_angles(rotation: Array, layout: Layout, order: Order, tolerance: float)
     n = len(rotation)
     place_of = np.argsort(order)
     if layout == "blocked":
-        angles, signs = eliminate(rotation[:, order[:n]], tolerance=tolerance)
-        angles, signs = np.concatenate([angles, angles]), np.concatenate([signs, signs])
+        angles, signs, dropped = elimination(rotation[:, order[:n]], tolerance=tolerance)
+        angles, signs, dropped = np.concatenate([angles, angles]), np.concatenate([signs, signs]), 2 * dropped
         places = mesh_positions(n)
         places = (*places, *(n + i for i in places))
     else:
-        angles, signs = eliminate(_line_matrix(rotation)[:, order], tolerance=tolerance)
+        angles, signs, dropped = elimination(_line_matrix(rotation)[:, order], tolerance=tolerance)
         places = mesh_positions(2 * n)
-    return LineAngles(places, angles, tuple(int(p) for p in place_of), signs[place_of])
+    return LineAngles(places, angles, tuple(int(p) for p in place_of), signs[place_of], dropped)
 
 
 def _line_matrix(rotation: Array) -> Array:

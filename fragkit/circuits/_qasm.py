@@ -65,10 +65,10 @@ def openqasm2(circuit: RotationCircuit, *, preparation: str = "", measure: bool 
 
 def _one_circuit(circuit: RotationCircuit, version: int, preparation: str, measure: bool) -> str:
     notes = [f"{key}: {text}" for key, text in circuit.provenance]
-    if circuit.angle_tolerance > 0.0:
+    if circuit.dropped:
         notes.append(
-            f"{circuit.dropped} rotations left out (tolerance {circuit.angle_tolerance:g} rad); total variation "
-            f"distance of the probabilities at most {circuit.distribution_bound:.3g}."
+            f"Approximate: {circuit.dropped} elements of at most {circuit.angle_tolerance:g} rad left uncleared; "
+            f"total variation distance of the probabilities at most {circuit.distribution_bound:.3g}."
         )
     return program(
         version=version,

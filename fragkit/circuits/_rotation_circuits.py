@@ -4,11 +4,9 @@ from collections.abc import Iterable, Mapping, Sequence
 from typing import Any, get_args
 
 import numpy as np
-from numpy.typing import NDArray
 
 from fragkit.circuits._circuit import Layout, RotationCircuit
 from fragkit.circuits._compile import (
-    LineAngles,
     Readout,
     distribution_bound,
     earliest_layers,
@@ -17,7 +15,6 @@ from fragkit.circuits._compile import (
 )
 from fragkit.core import Fragment, InputError, as_count, as_electrons, as_rotation, frozen
 
-Array = NDArray[np.float64]
 LARGEST_TOLERANCE = 0.1
 
 
@@ -29,7 +26,7 @@ def rotation_circuits(
     frame: Any = None,
     qubit_map: Sequence[int] | None = None,
     couplings: Iterable[tuple[int, int]] | None = None,
-    angle_tolerance: float = 0.0,
+    angle_tolerance: float = 1e-9,
     electrons: Any = None,
     provenance: Mapping[str, Any] | None = None,
 ) -> list[RotationCircuit]:
@@ -59,7 +56,8 @@ def rotation_circuits(
         Pairs of device qubits on which a gate can act, either way round. If given, every gate is checked.
     angle_tolerance
         Radian, at most 0.1. Rotations that would clear a matrix element of at most this size are left out; the error is
-        bounded by `circuit.distribution_bound`. Zero keeps every rotation above rounding (1e-14).
+        bounded by `circuit.distribution_bound` and stated in exported files. The default takes out what the rounding
+        of integrals and fits leaves in place of symmetry zeros. Zero keeps every rotation above 1e-14.
     electrons
         (alpha, beta); makes the bound tighter.
     provenance
@@ -120,7 +118,7 @@ def rotation_circuits(
             readout=compiled.readout,
             qubits=qubits,
             signs=frozen(compiled.signs),
-            dropped=_dropped(rotation, layout, readout, compiled) if tolerance > 0.0 else 0,
+            dropped=compiled.dropped,
             angle_tolerance=tolerance,
             distribution_bound=min(1.0, distribution_bound(rotation, layout, compiled, pair)),
             provenance=note,
@@ -129,12 +127,6 @@ def rotation_circuits(
             _check_couplings(circuit, allowed)
         circuits.append(circuit)
     return circuits
-
-
-def _dropped(rotation: Array, layout: Layout, readout: Readout, compiled: LineAngles) -> int:
-    """How many rotations more the exact circuit with the same options has."""
-    exact = line_angles(rotation, layout, readout_order(rotation, layout, readout, 0.0), 0.0)
-    return max(0, int(np.count_nonzero(exact.angles) - np.count_nonzero(compiled.angles)))
 
 
 def _tolerance(value: Any) -> float:

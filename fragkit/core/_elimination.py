@@ -12,6 +12,7 @@ labels the Bruhat cell of U, and no product of fewer neighbour rotations reaches
 
 from functools import lru_cache
 from math import atan, copysign, hypot, pi
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -45,6 +46,14 @@ def mesh_positions(size: int) -> tuple[int, ...]:
     return tuple(i for i, _ in rows) + tuple(i for _, i in reversed(columns))
 
 
+class Elimination(NamedTuple):
+    """Angles of the mesh, signs of the new orbitals, and how many matrix elements above rounding were left."""
+
+    angles: Array
+    signs: Array
+    left: int
+
+
 def eliminate(matrix: Array, *, tolerance: float = 0.0) -> tuple[Array, Array]:
     """Angles of the mesh and signs of the new orbitals for an orthogonal matrix (size, size).
 
@@ -61,11 +70,18 @@ def eliminate(matrix: Array, *, tolerance: float = 0.0) -> tuple[Array, Array]:
         (size(size−1)/2,) radian in [−π/2, π/2], zero where no rotation is needed, in the order of
         `mesh_positions`; (size,) of ±1.
     """
+    angles, signs, _ = elimination(matrix, tolerance=tolerance)
+    return angles, signs
+
+
+def elimination(matrix: Array, *, tolerance: float = 0.0) -> Elimination:
+    """As `eliminate`, with the number of matrix elements left because of the tolerance."""
     work = np.array(matrix, dtype=np.float64)
     size = len(work)
     zero = max(tolerance, ROUNDING_ZERO)
     row_steps, column_steps = _elimination_steps(size)
     row_angles, column_angles = [], []
+    left = 0
     next_row, next_column = 0, 0
     for diagonal in range(1, size):
         for _ in range(diagonal):
@@ -73,25 +89,28 @@ def eliminate(matrix: Array, *, tolerance: float = 0.0) -> tuple[Array, Array]:
                 row, i = column_steps[next_column]
                 next_column += 1
                 element, pivot = float(work[row, i]), float(work[row, i + 1])
-                column_angles.append(_rotate(work[:, i + 1], work[:, i], pivot, element, zero))
+                angles, kept, cleared = column_angles, work[:, i + 1], work[:, i]
             else:
                 i, column = row_steps[next_row]
                 next_row += 1
                 element, pivot = float(work[i + 1, column]), float(work[i, column])
-                row_angles.append(_rotate(work[i], work[i + 1], pivot, element, zero))
+                angles, kept, cleared = row_angles, work[i], work[i + 1]
+            if abs(element) > zero:
+                angles.append(_rotate(kept, cleared, pivot, element))
+            else:
+                angles.append(0.0)
+                left += abs(element) > ROUNDING_ZERO
     signs = np.where(np.diag(work) < 0.0, -1.0, 1.0)
     # diag(signs) M(i, θ) = M(i, ± θ) diag(signs) moves the signs behind the rotations of the columns.
     moved = [
         float(angle * signs[i] * signs[i + 1])
         for angle, (_, i) in zip(reversed(column_angles), reversed(column_steps), strict=True)
     ]
-    return np.array(row_angles + moved) + 0.0, signs
+    return Elimination(np.array(row_angles + moved) + 0.0, signs, left)
 
 
-def _rotate(kept: Array, cleared: Array, pivot: float, element: float, zero: float) -> float:
+def _rotate(kept: Array, cleared: Array, pivot: float, element: float) -> float:
     """Clear `element` of one vector with `pivot` of the other, in place; return the angle."""
-    if abs(element) <= zero:
-        return 0.0
     radius = hypot(pivot, element)
     if pivot == 0.0:
         cosine, sine, angle = 0.0, copysign(1.0, element), copysign(pi / 2, element)
