@@ -152,7 +152,7 @@ class ReferenceState(ABC):
             If a shape is wrong, an entry is not finite or a rotation is not orthogonal.
         """
         n = self.orbitals
-        turns = as_real_array(rotations, "rotations", (None, n, n))
+        turns: NDArray[Any] = as_real_array(rotations, "rotations", (None, n, n))
         values = as_real_array(coefficients, "coefficients", (len(turns), feature_count(n)))
         error = float(np.max(np.abs(turns.transpose(0, 2, 1) @ turns - np.eye(n)), initial=0.0))
         if error > 1e-6:

@@ -119,7 +119,7 @@ class Factor:
         Column J of the compound matrix is the antisymmetrised product of k columns of U, so the first half of J and
         the second half are transformed one after the other, each by much smaller minors (Laplace's expansion).
         """
-        count, n = self._count, self.orbitals
+        count = self._count
         if count == 0:
             return np.broadcast_to(self.matrix.astype(rotations.dtype), (len(rotations), *self.matrix.shape))
         source, table = self._cast(rotations.dtype)
@@ -161,7 +161,8 @@ def _spread(matrix: Array, orbitals: int, electrons: int) -> Array:
     first, last = occupied_orbitals(orbitals, split.head), occupied_orbitals(orbitals, split.tail)
     joined = np.concatenate([np.repeat(first, len(last), axis=0), np.tile(last, (len(first), 1))], axis=1)
     order = np.argsort(joined, axis=1, kind="stable")
-    inversions = sum((joined[:, i] > joined[:, j]) for i in range(electrons) for j in range(i + 1, electrons))
+    i, j = np.triu_indices(electrons, 1)
+    inversions = (joined[:, i] > joined[:, j]).sum(axis=1)
     ascending = np.take_along_axis(joined, order, axis=1)
     apart = np.all(np.diff(ascending, axis=1) > 0, axis=1)
     table = np.zeros((len(joined), matrix.shape[1]))

@@ -21,7 +21,7 @@ def hamiltonian_action(hamiltonian: Hamiltonian) -> tuple[Callable[[Array], Arra
     diagonal = np.asarray(direct_spin1.make_hdiag(one_body, two_body, n, electrons)).reshape(shape)
     if sum(electrons) == 0:
         return np.zeros_like, diagonal
-    absorbed = direct_spin1.absorb_h1e(one_body, two_body, n, electrons, 0.5)
+    absorbed = direct_spin1.absorb_h1e(one_body, two_body, n, electrons, 0.5)  # pyright: ignore[reportArgumentType]
     links = tuple(cistring.gen_linkstr_index_trilidx(range(n), k) for k in electrons)
 
     def act(vector: Array) -> Array:

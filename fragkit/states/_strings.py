@@ -68,11 +68,11 @@ def minors(matrices: Array, size: int) -> Array:
         occupied = occupied_orbitals(n, k)
         without, signs = _expansion(n, k)
         last, before = occupied[:, -1], without[k - 1]
-        grown = 0.0
-        for t in range(k):
-            cofactor = table[..., without[t], :][..., before]
-            grown = grown + signs[t] * columns_first[..., occupied[:, t], :][..., last] * cofactor
-        table = grown
+        terms = [
+            signs[t] * columns_first[..., occupied[:, t], :][..., last] * table[..., without[t], :][..., before]
+            for t in range(k)
+        ]
+        table = sum(terms[1:], start=terms[0])
     return table
 
 
