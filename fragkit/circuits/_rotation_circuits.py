@@ -13,7 +13,7 @@ from fragkit.circuits._compile import (
     line_angles,
     readout_order,
 )
-from fragkit.core import Fragment, InputError, as_count, as_electrons, as_rotation, frozen
+from fragkit.core import ANGLE_TOLERANCE, Fragment, InputError, as_count, as_electrons, as_rotation, frozen
 
 LARGEST_TOLERANCE = 0.1
 
@@ -26,7 +26,7 @@ def rotation_circuits(
     frame: Any = None,
     qubit_map: Sequence[int] | None = None,
     couplings: Iterable[tuple[int, int]] | None = None,
-    angle_tolerance: float = 1e-9,
+    angle_tolerance: float = ANGLE_TOLERANCE,
     electrons: Any = None,
     provenance: Mapping[str, Any] | None = None,
 ) -> list[RotationCircuit]:

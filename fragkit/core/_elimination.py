@@ -22,6 +22,9 @@ Array = NDArray[np.float64]
 ROUNDING_ZERO = 1e-14
 """Matrix elements below this are zeros that rounding has touched."""
 
+ANGLE_TOLERANCE = 1e-9
+"""Default tolerance of circuits in radian: above what the rounding of integrals and fits leaves of symmetry zeros."""
+
 
 @lru_cache(maxsize=64)
 def _elimination_steps(size: int) -> tuple[tuple[tuple[int, int], ...], tuple[tuple[int, int], ...]]:

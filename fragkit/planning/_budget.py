@@ -7,7 +7,7 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import InputError, TimeModel, as_count, as_positive, eliminate, mesh_positions
+from fragkit.core import ANGLE_TOLERANCE, InputError, TimeModel, as_count, as_positive, eliminate, mesh_positions
 from fragkit.planning._allocation import shots_for_error, shots_for_seconds, shots_for_total
 from fragkit.planning._plan import CHEMICAL_ACCURACY
 
@@ -95,7 +95,7 @@ class Budget:
 
 def circuit_layers(rotation: Array) -> int:
     """Layers of neighbour rotations that a rotation circuit on a line takes, each gate as early as it can be."""
-    angles, _ = eliminate(rotation)
+    angles, _ = eliminate(rotation, tolerance=ANGLE_TOLERANCE)
     busy = np.zeros(len(rotation) + 1, dtype=int)
     for i, angle in zip(mesh_positions(len(rotation)), angles, strict=True):
         if angle != 0.0:
