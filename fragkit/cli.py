@@ -233,6 +233,7 @@ def _export(options: argparse.Namespace) -> int:
             shots=plan.shots,
             hamiltonian_digest=plan.hamiltonian_digest,
             plan_digest=plan.digest,
+            sector_exact=plan.sector_exact,
             layout=options.layout,
             overwrite=options.overwrite,
         )

@@ -145,6 +145,7 @@ def test_damaged_and_foreign_files_are_refused(tmp_path):
         ({"shots": [1, 0.5]}, "whole numbers"),
         ({"electrons": (3, 0)}, "`electrons`"),
         ({"layout": "zigzag"}, "`layout`"),
+        ({"sector_exact": True}, "`electrons`"),
     ],
 )
 def test_bad_export_arguments_are_named_and_write_nothing(change, message, tmp_path):

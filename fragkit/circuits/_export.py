@@ -49,6 +49,7 @@ def export_angles(
     shots: Any = None,
     hamiltonian_digest: str = "",
     plan_digest: str = "",
+    sector_exact: bool = False,
     overwrite: bool = False,
     **options: Any,
 ) -> Path:
@@ -68,6 +69,9 @@ def export_angles(
         (circuits,) whole numbers, or None.
     hamiltonian_digest, plan_digest
         Digests to store with the data.
+    sector_exact
+        Whether the fragments are the Hamiltonian only at exactly `electrons`, so that the estimate has to discard
+        shots with other numbers.
     overwrite
         Whether to replace an existing file.
     options
@@ -83,6 +87,8 @@ def export_angles(
     InputError
         If an argument is not as above, or the file exists and `overwrite` is false.
     """
+    from fragkit import __version__
+
     target = as_path(path)
     if target.suffix not in (".json", ".npz"):
         raise InputError(f"`path` must end in .json or .npz (got {target.name!r})")
@@ -116,7 +122,22 @@ def export_angles(
         if np.any(numbers != np.round(numbers)) or np.any(numbers < 0):
             raise InputError(f"`shots` must be whole numbers, not negative (got {numbers.tolist()})")
         arrays["shots"] = numbers.astype(np.int64)
-    document = _document(circuits[0].layout, circuits[0].orbitals, electrons, hamiltonian_digest, plan_digest)
+    if sector_exact and electrons is None:
+        raise InputError("`electrons` must be given with `sector_exact` (got None)")
+    document = {
+        "schema_name": SCHEMA_NAME,
+        "schema_version": SCHEMA_VERSION,
+        "provenance": {"creator": "fragkit", "version": __version__, "routine": "fragkit.circuits.export_angles"},
+        "units": {"energy": "hartree", "angle": "radian"},
+        "conventions": CONVENTIONS,
+        "hamiltonian_digest": hamiltonian_digest,
+        "plan_digest": plan_digest,
+        "orbitals": circuits[0].orbitals,
+        "electrons": None if electrons is None else list(as_electrons(electrons, circuits[0].orbitals)),
+        "sector_exact": bool(sector_exact),
+        "layout": circuits[0].layout,
+        "angle_tolerance": circuits[0].angle_tolerance,
+    }
     document["digest"] = _digest(document, arrays)
     if target.suffix == ".json":
         data: str | bytes = _json_text(document, arrays)
@@ -164,23 +185,6 @@ def read_angles(path: Any) -> tuple[dict[str, Any], Arrays]:
     if document.get("digest") != _digest(document, arrays):
         raise MismatchError(f"`path` must have the content its digest was made of (got {target}); export it again")
     return document, arrays
-
-
-def _document(layout: str, orbitals: int, electrons: Any, hamiltonian_digest: str, plan_digest: str) -> dict[str, Any]:
-    from fragkit import __version__
-
-    return {
-        "schema_name": SCHEMA_NAME,
-        "schema_version": SCHEMA_VERSION,
-        "provenance": {"creator": "fragkit", "version": __version__, "routine": "fragkit.circuits.export_angles"},
-        "units": {"energy": "hartree", "angle": "radian"},
-        "conventions": CONVENTIONS,
-        "hamiltonian_digest": hamiltonian_digest,
-        "plan_digest": plan_digest,
-        "orbitals": orbitals,
-        "electrons": None if electrons is None else list(as_electrons(electrons, orbitals)),
-        "layout": layout,
-    }
 
 
 def _digest(document: dict[str, Any], arrays: Arrays) -> str:
