@@ -1,0 +1,148 @@
+"""The cheapest way to divide the coefficients of Pauli strings among overlapping groups."""
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.linalg import cho_factor, cho_solve
+
+from fragkit.core import InputError
+from fragkit.pauli._groups import Indices
+from fragkit.pauli._terms import Array, PauliTerms
+from fragkit.pauli._variance import Determinants, string_signs
+
+
+@dataclass(frozen=True, eq=False, repr=False)
+class Split:
+    """Coefficients of each group, adding up to the Hamiltonian's, and how close the cost is to the least possible.
+
+    Parameters
+    ----------
+    coefficients
+        One array per group, in the order of its terms, hartree.
+    deviations
+        (groups,) standard deviation of each group, hartree.
+    cost
+        (Σ deviations)² in hartree².
+    lower_bound
+        No division of the coefficients among these groups costs less with the regularised covariances, hartree²
+        (from the dual problem).
+    iterations, converged, message
+        How the iteration ended.
+    """
+
+    coefficients: tuple[Array, ...]
+    deviations: Array
+    cost: float
+    lower_bound: float
+    iterations: int
+    converged: bool
+    message: str
+
+
+def group_covariances(terms: PauliTerms, groups: list[Indices], state: Determinants) -> list[Array]:
+    """Covariance matrix of the strings of each group (members commute), real and dimensionless."""
+    position = _Positions(state)
+    return [_covariance(terms, group, state, position) for group in groups]
+
+
+def least_cost_split(
+    terms: PauliTerms,
+    groups: list[Indices],
+    covariances: list[Array],
+    *,
+    tolerance: float = 3e-3,
+    iterations: int = 300,
+    regularisation: float = 1e-7,
+) -> Split:
+    """Minimise (Σ_g σ_g)² over coefficients c_g of each group with Σ_g c_g = c.
+
+    The problem is convex. At shot shares w the best division is c_g = w_g C_g⁻¹ ν_g with
+    (Σ_g w_g C_g⁻¹) ν = c, matrices placed at the terms of each group (generalised least squares: Aitken 1936); at
+    given coefficients the best shares are w_g ∝ σ_g (Neyman 1934). Alternating the two never raises the cost, and
+    every ν bounds the least cost from below by (cᵀν)² / max_g ν_gᵀ C_g⁻¹ ν_g (Cauchy-Schwarz).
+
+    Parameters
+    ----------
+    covariances
+        C_g of each group. `regularisation` is added to their diagonals while solving, since strings that are
+        certain in the state make them singular; the cost is evaluated without it.
+    tolerance
+        Relative gap between cost and lower bound at which the iteration ends. It also ends when twenty iterations
+        lowered the cost by less than a hundredth of this.
+    """
+    wanted = terms.coefficients
+    inverses = [_inverse(matrix, regularisation) for matrix in covariances]
+    shares = np.full(len(groups), 1.0 / len(groups))
+    lower, before = 0.0, np.inf
+    for step in range(1, iterations + 1):
+        coefficients, bound = _divide(wanted, groups, inverses, shares)
+        lower = max(lower, bound)
+        variances = np.array([c @ matrix @ c for c, matrix in zip(coefficients, covariances, strict=True)])
+        deviations = np.sqrt(np.maximum(variances, 0.0))
+        regularised = np.sqrt(deviations**2 + [regularisation * float(c @ c) for c in coefficients])
+        cost = float(np.sum(regularised)) ** 2
+        settled = step % 20 == 0 and before - cost < 0.01 * tolerance * cost
+        before = cost if step % 20 == 0 else before
+        if cost <= lower * (1.0 + tolerance) or settled or step == iterations:
+            converged = settled or cost <= lower * (1.0 + tolerance)
+            how = "converged" if converged else "NOT converged (raise `iterations`)"
+            message = f"{how} after {step} iterations, {cost / lower - 1.0:.2g} above the lower bound"
+            total = float(np.sum(deviations)) ** 2
+            return Split(tuple(coefficients), deviations, total, lower, step, converged, message)
+        shares = regularised / np.sum(regularised)
+    raise InputError(f"`iterations` must be at least 1 (got {iterations})")
+
+
+def _divide(wanted: Array, groups: list[Indices], inverses: list[Array], shares: Array) -> tuple[list[Array], float]:
+    """Best coefficients at given shares, and the lower bound that the prices ν give."""
+    normal = np.zeros((len(wanted), len(wanted)))
+    for group, inverse, share in zip(groups, inverses, shares, strict=True):
+        normal[np.ix_(group, group)] += share * inverse
+    price = cho_solve(cho_factor(normal, lower=True, overwrite_a=True, check_finite=False), wanted)
+    images = [inverse @ price[group] for group, inverse in zip(groups, inverses, strict=True)]
+    worth = max(float(price[group] @ image) for group, image in zip(groups, images, strict=True))
+    return [share * image for share, image in zip(shares, images, strict=True)], float(wanted @ price) ** 2 / worth
+
+
+class _Positions:
+    """Where a basis state stands in the list of determinants, −1 if it is not there."""
+
+    def __init__(self, state: Determinants) -> None:
+        self.labels = state.labels
+
+    def of(self, labels: np.ndarray) -> np.ndarray:
+        place = np.minimum(np.searchsorted(self.labels, labels), len(self.labels) - 1)
+        return np.where(self.labels[place] == labels, place, -1)
+
+
+def _covariance(terms: PauliTerms, group: Indices, state: Determinants, position: _Positions) -> Array:
+    rank = np.argsort(terms.x[group], kind="stable")
+    ordered = group[rank]
+    masks = terms.x[ordered]
+    starts = np.flatnonzero(np.r_[True, np.diff(masks) != 0])
+    stops = np.r_[starts[1:], len(ordered)]
+    images = string_signs(terms, ordered, state.labels) * state.amplitudes
+    products = np.zeros((len(ordered), len(ordered)))
+    for k, (a, b) in enumerate(zip(starts, stops, strict=True)):
+        for c, d in zip(starts[k:], stops[k:], strict=True):
+            # P_a|b⟩ sits at b ⊕ x_a, which the other string reaches from b ⊕ x_a ⊕ x_c.
+            if c == a:
+                products[a:b, a:b] = images[a:b] @ images[a:b].T
+                continue
+            source = position.of(state.labels ^ (masks[a] ^ masks[c]))
+            here = np.flatnonzero(source >= 0)
+            products[a:b, c:d] = images[a:b, here] @ images[c:d, source[here]].T
+            products[c:d, a:b] = products[a:b, c:d].T
+    means = np.zeros(len(ordered))
+    for a, b in zip(starts, stops, strict=True):
+        target = position.of(state.labels ^ masks[a])
+        here = np.flatnonzero(target >= 0)
+        means[a:b] = images[a:b, here] @ state.amplitudes[target[here]]
+    covariance = np.zeros_like(products)
+    covariance[np.ix_(rank, rank)] = products - np.outer(means, means)
+    return covariance
+
+
+def _inverse(matrix: Array, regularisation: float) -> Array:
+    values, vectors = np.linalg.eigh(matrix)
+    return (vectors / (np.maximum(values, 0.0) + regularisation)) @ vectors.T
