@@ -7,4 +7,6 @@ from fragkit.planning._plan import CHEMICAL_ACCURACY as CHEMICAL_ACCURACY
 from fragkit.planning._plan import Plan as Plan
 from fragkit.planning._plan import PlanBound as PlanBound
 from fragkit.planning._reweighted import reweighted as reweighted
+from fragkit.planning._trade_off import TradeOff as TradeOff
+from fragkit.planning._trade_off import trade_off as trade_off
 from fragkit.planning._verb import plan as plan

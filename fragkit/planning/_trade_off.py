@@ -1,0 +1,197 @@
+"""Cost against number of circuits."""
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fragkit.core import Hamiltonian, InputError, TimeModel, as_count
+from fragkit.planning._assemble import plan_of_design
+from fragkit.planning._budget import Budget
+from fragkit.planning._choose import Design, Settings, design_for
+from fragkit.planning._cost import check_state
+from fragkit.planning._plan import Plan
+from fragkit.planning._robust import PLANNING_NOISE, robust_state
+from fragkit.planning._rotations import least_count
+from fragkit.states import ReferenceState
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True, eq=False, repr=False)
+class TradeOff:
+    """Plans of different numbers of circuits, fewest first.
+
+    Parameters
+    ----------
+    plans
+        One for each number of circuits.
+    seconds
+        (P,) time of each plan's shots and changes of circuit, or None without a time model.
+    """
+
+    plans: tuple[Plan, ...]
+    seconds: Array | None = None
+
+    @property
+    def circuits(self) -> NDArray[np.int64]:
+        """(P,) numbers of circuits."""
+        return np.array([len(plan) for plan in self.plans])
+
+    @property
+    def cost(self) -> Array:
+        """(P,) shots × error² in the reference state, hartree²."""
+        return np.array([plan.diagnostics["reference"] for plan in self.plans])
+
+    @property
+    def shots(self) -> NDArray[np.int64]:
+        """(P,) shots of each plan."""
+        return np.array([plan.total_shots for plan in self.plans])
+
+    def best(self, circuit_overhead: float = 0.0) -> Plan:
+        """The plan with the least shots + circuit_overhead × circuits, or the least time when seconds are known.
+
+        `circuit_overhead` is the number of shots that a further circuit is worth; it is not used with a time model.
+        """
+        spent = self.seconds if self.seconds is not None else self.shots + circuit_overhead * self.circuits
+        return self.plans[int(np.argmin(spent))]
+
+    def table(self) -> str:
+        """A text table, one row per number of circuits."""
+        rows = [("circuits", "cost / Ha^2", "shots", "error / mHa", "seconds")]
+        for k, plan in enumerate(self.plans):
+            time = "-" if self.seconds is None else f"{self.seconds[k]:.4g}"
+            error = f"{1e3 * plan.predicted_error:.3f}"
+            rows.append((str(len(plan)), f"{self.cost[k]:.4g}", f"{plan.total_shots:,}", error, time))
+        widths = [max(len(row[c]) for row in rows) for c in range(5)]
+        lines = ["  ".join(cell.rjust(width) for cell, width in zip(row, widths, strict=True)) for row in rows]
+        return "\n".join(lines)
+
+    def plot(self, ax: "Axes | None" = None, *, label: str | None = None) -> "Axes":
+        """Cost against number of circuits on the given matplotlib axes or new ones; returns the axes."""
+        axes: Any = ax
+        if axes is None:
+            import matplotlib.pyplot as plt
+
+            axes = plt.subplots(figsize=(6.0, 3.8), layout="constrained")[1]
+        axes.plot(self.circuits, self.cost, marker="o", label=label)
+        axes.set_xlabel("circuits")
+        axes.set_ylabel("cost: shots × error² / Ha²")
+        axes.set_yscale("log")
+        if label is not None:
+            axes.legend()
+        return axes
+
+    def __len__(self) -> int:
+        return len(self.plans)
+
+    def __str__(self) -> str:
+        return self.table()
+
+    def __repr__(self) -> str:
+        return f"TradeOff({len(self)} plans, circuits {self.circuits.tolist()})"
+
+
+def trade_off(
+    hamiltonian: Hamiltonian,
+    state: ReferenceState,
+    counts: Sequence[int] | None = None,
+    *,
+    target_error: float | None = None,
+    total_shots: int | None = None,
+    minimum_shots: int = 10,
+    time_model: TimeModel | None = None,
+    shifts: bool = True,
+    planning_noise: float = PLANNING_NOISE,
+    rng: np.random.Generator | int | None = 0,
+    tolerance: float = 5e-3,
+    max_evaluations: int = 4000,
+    progress: bool = False,
+) -> TradeOff:
+    """Plans for several numbers of circuits, each started from its neighbours.
+
+    Going up, random rotations are added to those found for the number before; going down again, the circuits with the
+    fewest shots are dropped from those of the number after, and the better of the two results is kept.
+
+    Parameters
+    ----------
+    hamiltonian, state
+        As for `fragkit.plan`.
+    counts
+        Numbers of circuits; from the fewest that generic rotations allow, (n+1)(n+2)/4, to twice that when None.
+        Below that number rotations are fitted to the Hamiltonian, and cost much more.
+    target_error, total_shots, minimum_shots, time_model, shifts, planning_noise, rng, tolerance, max_evaluations
+        As for `fragkit.plan`.
+    progress
+        Show a bar for each optimisation.
+
+    Raises
+    ------
+    InputError
+        If an argument is not what it must be.
+
+    Examples
+    --------
+    >>> import numpy as np
+    >>> from fragkit.core import Hamiltonian
+    >>> from fragkit.states import reference_state
+    >>> on_site = np.zeros((2, 2, 2, 2))
+    >>> on_site[0, 0, 0, 0] = on_site[1, 1, 1, 1] = 4.0
+    >>> ham = Hamiltonian(0.0, np.array([[0.0, -1.0], [-1.0, 0.0]]), on_site, electrons=(1, 1))
+    >>> curve = trade_off(ham, reference_state(ham, "fci"), [3, 4])
+    >>> curve.circuits
+    array([3, 4])
+    """
+    check_state(state, hamiltonian.orbitals, hamiltonian.electrons)
+    fewest = least_count(hamiltonian.orbitals)
+    if counts is None:
+        counts = sorted({fewest + round(k * fewest / 5) for k in range(6)})
+    numbers = sorted({as_count(k, "counts", minimum=1) for k in counts})
+    if not numbers:
+        raise InputError("`counts` must hold at least one number of circuits (got none)")
+    budget = Budget(target_error, total_shots, None, minimum_shots, time_model)
+    planned_on = robust_state(state, planning_noise)
+    settings = Settings(shifts=shifts, rng=rng, tolerance=tolerance, max_evaluations=max_evaluations, progress=progress)
+    designs: list[Design] = []
+    for count in numbers:
+        warm = designs[-1].rotations if designs and len(designs[-1].rotations) <= count else None
+        designs.append(design_for(hamiltonian, planned_on, count, settings, start=warm))
+    for k in range(len(numbers) - 2, -1, -1):
+        if numbers[k] < fewest:
+            break
+        shares = designs[k + 1].weighting.shares
+        heavy = np.sort(np.argsort(-shares)[: numbers[k]])
+        again = design_for(hamiltonian, planned_on, numbers[k], settings, start=designs[k + 1].rotations[heavy])
+        if again.weighting.converged >= designs[k].weighting.converged and (
+            again.weighting.cost < designs[k].weighting.cost
+        ):
+            designs[k] = again
+    plans = tuple(plan_of_design(hamiltonian, state, design, budget, planning_noise) for design in designs)
+    return TradeOff(plans, plan_seconds(plans, budget))
+
+
+def plan_seconds(plans: Sequence[Plan], budget: Budget) -> Array | None:
+    """(P,) seconds of shots and changes of circuit, or None without a time model."""
+    if budget.time_model is None:
+        return None
+    return np.array(
+        [
+            float(plan.shots @ budget.prices([f.rotation for f in plan.fragments]))
+            + len(plan) * budget.time_model.switch_seconds
+            for plan in plans
+        ]
+    )
+
+
+def growing_counts(orbitals: int, maximum: int | None) -> Iterator[int]:
+    """Numbers of circuits to try, from the fewest that generic rotations allow, in growing steps."""
+    count, step = least_count(orbitals), 2
+    while maximum is None or count <= maximum:
+        yield count
+        count += step
+        step = max(2, round(0.15 * count))
