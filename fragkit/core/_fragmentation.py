@@ -9,6 +9,7 @@ import numpy as np
 from fragkit.core._errors import InputError, MismatchError
 from fragkit.core._fragment import Fragment
 from fragkit.core._hamiltonian import Hamiltonian
+from fragkit.core._one_norm import one_norm
 from fragkit.core._openfermion import interaction_operator
 from fragkit.core._operator_tensors import OperatorTensors, energy_bound, fragment_tensors, residual_norm
 
@@ -95,6 +96,11 @@ class Fragmentation:
     def orbitals(self) -> int:
         """Number of spatial orbitals n."""
         return self.fragments[0].orbitals
+
+    @property
+    def one_norm(self) -> float:
+        """Sum of |coefficients| over reflections, hartree, as block encoding pays it; see `fragkit.core.one_norm`."""
+        return one_norm(self.fragments)
 
     def check_belongs_to(self, hamiltonian: Hamiltonian) -> None:
         """Raise `MismatchError` unless these are fragments of exactly this Hamiltonian."""

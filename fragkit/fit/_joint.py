@@ -222,7 +222,7 @@ class _Run:
         outcome = levenberg_marquardt(
             self.target,
             begin,
-            dense_solver if method == "dense" else matrix_free_solver(max_steps=60, accuracy=0.05),
+            dense_solver if method == "dense" else matrix_free_solver(max_steps=30, accuracy=0.1),
             tol=self.tol,
             max_iterations=self.strategy.max_iterations,
             penalty=penalty,

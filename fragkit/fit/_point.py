@@ -84,7 +84,7 @@ def adjoint(point: Point, tensor: Array) -> Tangent:
 
     ⟨v, w⟩ is Σ_{a<b} v_ab w_ab of the antisymmetric parts plus Σ_ij of the symmetric ones.
     """
-    count, n, size = point.pairs.shape
+    _, n, size = point.pairs.shape
     applied = (point.pairs.reshape(-1, size) @ tensor).reshape(point.pairs.shape)
     change = applied @ point.pairs.transpose(0, 2, 1)
     # Σ_j λ_ij (tensor w_j) as a symmetric matrix of orbitals p, q, applied to orbital i.

@@ -13,6 +13,7 @@ differentiated with respect to rotations, coefficients and integrals inside any 
 so that a few more or fewer do not make XLA compile again.
 """
 
+from functools import partial
 from typing import Any, NamedTuple
 
 import jax
@@ -84,13 +85,11 @@ def squared_residual(target: ResidualTarget, rotations: Any, coefficients: Any, 
     1.0
     """
     rotations = _traced(rotations, "rotations")
-    coefficients = _masked(_traced(coefficients, "coefficients"), mask)
-    diagonals = target.rows @ _side_by_side(_pairs(rotations))
-    squares = _overlap(rotations, rotations) ** 2
+    coefficients = _traced(coefficients, "coefficients")
     return (
         target.squared_norm
-        - 2.0 * _linear(target.signs, diagonals, coefficients)
-        + _inner(squares, coefficients, coefficients)
+        + _attraction(target, rotations, coefficients, mask)
+        + _repulsion(target, rotations, coefficients, mask)
     )
 
 
@@ -103,7 +102,7 @@ def residual_matrix(target: ResidualTarget, rotations: Any, coefficients: Any, m
     coefficients = _masked(_traced(coefficients, "coefficients"), mask)
     pairs = _pairs(rotations)
     tensor = (target.rows.T * target.signs) @ target.rows
-    return tensor - _side_by_side(pairs @ coefficients) @ _side_by_side(pairs).T
+    return tensor - _flat(coefficients @ pairs).T @ _flat(pairs)
 
 
 def residual_and_gradient(target: ResidualTarget, rotations: Array, coefficients: Array) -> tuple[float, Array, Array]:
@@ -115,8 +114,12 @@ def residual_and_gradient(target: ResidualTarget, rotations: Array, coefficients
     count = len(rotations)
     rotations, coefficients, mask = _padded(rotations, coefficients)
     with jax.enable_x64(True):
-        value, turn, slope = _value_and_gradient(target, rotations, coefficients, mask)
-        return float(value), np.asarray(turn)[:count], np.asarray(slope)[:count]
+        # Two calls: in one program the two independent halves get into each other's way on a few CPU cores.
+        first = _value_and_gradient(target, rotations, coefficients, mask, part=_attraction)
+        second = _value_and_gradient(target, rotations, coefficients, mask, part=_repulsion)
+        value = float(target.squared_norm) + float(first[0]) + float(second[0])
+        turn, slope = (np.asarray(first[k]) + np.asarray(second[k]) for k in (1, 2))
+        return value, turn[:count], slope[:count]
 
 
 def gauss_newton_product(rotations: Array, coefficients: Array, turns: Array, changes: Array) -> tuple[Array, Array]:
@@ -157,9 +160,9 @@ def padded_count(count: int) -> int:
     return max(step, -(-count // step) * step)
 
 
-@jax.jit
-def _value_and_gradient(target, rotations, coefficients, mask):
-    value, (by_rotation, by_coefficient) = jax.value_and_grad(squared_residual, argnums=(1, 2))(
+@partial(jax.jit, static_argnames="part")
+def _value_and_gradient(target, rotations, coefficients, mask, part):
+    value, (by_rotation, by_coefficient) = jax.value_and_grad(part, argnums=(1, 2))(
         target, rotations, coefficients, mask
     )
     return value, _tangent(rotations, by_rotation), by_coefficient
@@ -187,33 +190,49 @@ def _tangent(rotations, gradient):
 
 
 def _pairs(rotations):
-    rows, columns = pair_indices(rotations.shape[-1])
-    weights = pair_weights(rotations.shape[-1])
-    return rotations[:, rows, :] * rotations[:, columns, :] * weights[:, None]
+    """Weighted pair vectors of the occupation operators as rows, (M, n, P)."""
+    n = rotations.shape[-1]
+    rows, columns = pair_indices(n)
+    orbitals = jnp.swapaxes(rotations, 1, 2)
+    # Products with 0/1 matrices instead of indexing: the derivative of indexing is a scatter, slow on CPUs.
+    identity = np.eye(n)
+    return (orbitals @ (identity[:, rows] * pair_weights(n))) * (orbitals @ identity[:, columns])
 
 
-def _side_by_side(blocks):
-    """(M, P, n) as one matrix (P, M n), so that one large product replaces M small ones."""
-    return jnp.swapaxes(blocks, 0, 1).reshape(blocks.shape[1], -1)
+def _flat(blocks):
+    """(M, n, K) as one matrix (M n, K), so that one large product replaces M small ones."""
+    return blocks.reshape(-1, blocks.shape[-1])
 
 
 def _overlap(left, right):
     """U_mᵀ U_m' of all pairs of fragments, (M n, M n)."""
-    return _side_by_side(left).T @ _side_by_side(right)
+    return _flat(jnp.swapaxes(left, 1, 2)) @ _flat(jnp.swapaxes(right, 1, 2)).T
 
 
-def _linear(signs, diagonals, coefficients):
-    count, n, _ = coefficients.shape
-    blocks = diagonals.reshape(-1, count, n)
-    return jnp.einsum("q,qmi,qmi->", signs, jnp.einsum("qmj,mij->qmi", blocks, coefficients), blocks)
+def _attraction(target, rotations, coefficients, mask):
+    """−2 ⟨G, Σ_m F_m⟩."""
+    pairs = jax.lax.optimization_barrier(_pairs(rotations))
+    diagonals = jax.lax.optimization_barrier(_flat(pairs) @ target.rows.T).reshape(*pairs.shape[:2], -1)
+    best = (diagonals * target.signs) @ jnp.swapaxes(diagonals, 1, 2)
+    return -2.0 * jnp.sum(_masked(coefficients, mask) * best)
+
+
+def _repulsion(target, rotations, coefficients, mask):
+    """‖Σ_m F_m‖²."""
+    del target
+    overlap = _overlap(rotations, rotations)
+    coefficients = _masked(coefficients, mask)
+    return _inner(overlap * overlap, coefficients, coefficients)
 
 
 def _inner(squares, left, right):
-    """Σ_{mm'} ⟨λ^m, S λ^{m'} Sᵀ⟩ for S (M n, M n)."""
+    """Σ_{mm'} ⟨λ^m, S λ^{m'} Sᵀ⟩ for S (M n, M n): the trace of λ S λ' Sᵀ with block-diagonal λ and λ'."""
     count, n, _ = left.shape
-    rows = squares.reshape(count, n, count * n)
-    weighted = jnp.einsum("amj,mjk->amk", squares.reshape(-1, count, n), right).reshape(rows.shape)
-    return jnp.sum(left * (weighted @ jnp.swapaxes(rows, 1, 2)))
+    # Barriers: without them XLA repeats the products inside the transposed sum, several times the work.
+    squares = jax.lax.optimization_barrier(squares)
+    one = jax.lax.optimization_barrier(left @ squares.reshape(count, n, count * n))
+    two = jax.lax.optimization_barrier(right @ squares.T.reshape(count, n, count * n))
+    return jnp.sum(_flat(one) * _flat(two).T)
 
 
 def _masked(coefficients, mask):
