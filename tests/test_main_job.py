@@ -8,7 +8,8 @@ import fragkit
 from fragkit.planning import plan_cost
 
 # Fragments of the low-rank form with weight above 1e-8 hartree, without the one-body fragment, and their cost
-# (Σ √Var)² in hartree² in the full CI state: computed once with numpy, pyscf 2.14 and OpenFermion 1.8 alone (None: not computed).
+# (Σ √Var)² in hartree² in the full CI state: computed once with numpy, pyscf 2.14 and OpenFermion 1.8 alone
+# (None: not computed).
 LOW_RANK = {
     "H2": (3, 0.137),
     "LiH": (21, 3.161),

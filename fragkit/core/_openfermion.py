@@ -18,7 +18,7 @@ def interaction_operator(constant: float, one_body: Array, two_body: Array) -> A
     OpenFermion's tensor multiplies a†_p a†_q a_r a_s without a factor ½, so it is ½ (ps|qr) spread over
     interleaved spin-orbitals.
     """
-    from openfermion.ops.representations import InteractionOperator
+    from openfermion.ops.representations.interaction_operator import InteractionOperator
 
     n = len(one_body)
     spin_one = np.zeros((2 * n, 2 * n))
