@@ -100,7 +100,7 @@ class CIState(ReferenceState):
         return CIExpectations(self._factored, self.electrons, rotations, coefficients)
 
     def _batch(self) -> int:
-        return max(1, 40_000 // self.vector.size)
+        return max(1, 100_000 // self.vector.size)
 
     @cached_property
     def _factored(self) -> FactoredVector:

@@ -17,6 +17,7 @@ from fragkit.core import pack_features, pair_indices, unpack_features
 from fragkit.states._base import Array, Expectations
 from fragkit.states._factored import FactoredVector
 from fragkit.states._strings import Strings, strings
+from fragkit.states._workspace import Workspace
 
 _BLOCK = 50_000  # determinants in a block
 
@@ -46,8 +47,9 @@ class CIExpectations(Expectations):
         alpha, beta = (strings(n, k) for k in electrons)
         self._alpha, self._beta = alpha, beta
         self._symmetric = factored.symmetric
-        self._left = factored.left.rotated(rotations)
-        self._right = self._left if self._symmetric else factored.right.rotated(rotations)
+        workspace = self._workspace = factored.workspace
+        self._left = factored.left.rotated(rotations, workspace)
+        self._right = self._left if self._symmetric else factored.right.rotated(rotations, workspace)
         self._scale = factored.scale.astype(kind)
 
         opposite, same, linear = unpack_features(coefficients, n)
@@ -70,11 +72,14 @@ class CIExpectations(Expectations):
         for start in range(0, alpha.count, step):
             stop = min(start + step, alpha.count)
             first = start if self._symmetric else 0
-            vector = scaled[:, start:stop] @ right[:, :, first:]
-            values = row_values[:, start:stop] @ columns[:, :, first:]
+            shape = (len(rotations), stop - start, beta.count - first)
+            vector, values = (workspace.array(f"{name} {start}", shape, kind) for name in ("vector", "values"))
+            np.matmul(scaled[:, start:stop], right[:, :, first:], out=vector)
+            np.matmul(row_values[:, start:stop], columns[:, :, first:], out=values)
             block = _Block(start, stop, first, vector, values)
             self._blocks.append(block)
-            total += self._weighted_dot(block, values * vector, vector)
+            product = np.multiply(values, vector, out=workspace.array("tilted", shape, kind))
+            total += self._weighted_dot(block, product, vector)
         self.mean = total + self._offset
 
     def _weighted_dot(self, block: _Block, x: Array, y: Array) -> Array:
@@ -101,10 +106,13 @@ class CIExpectations(Expectations):
         tilted_alpha, tilted_beta = np.zeros_like(self._left), np.zeros_like(self._right)
         for block in self._blocks:
             here, d = slice(block.start, block.stop), block.diagonal
-            deviation = block.values - shift
-            tilted = deviation * block.vector
+            deviation, tilted, weighted = (
+                self._workspace.array(name, block.vector.shape, kind) for name in ("deviation", "tilted", "weighted")
+            )
+            np.subtract(block.values, shift, out=deviation)
+            np.multiply(deviation, block.vector, out=tilted)
             second += self._weighted_dot(block, tilted, tilted)
-            weighted = tilted * block.vector
+            np.multiply(tilted, block.vector, out=weighted)
             tilted *= deviation  # now g∘c
             if symmetric:
                 inside = weighted[:, :, :d] @ columns[here]
@@ -125,12 +133,14 @@ class CIExpectations(Expectations):
         i, j = pair_indices(n)
         packed = np.where(i == j, 0.5, 1.0) * (cross[:, i, j] + cross[:, j, i])
         single = at_alpha @ alpha.features
-        gradient = _antisymmetric_transition(self._left, tilted_alpha * self._scale, alpha)
+        gradient = _antisymmetric_transition(self._left, tilted_alpha * self._scale, alpha, self._workspace)
         if symmetric:
             single, gradient = 2.0 * single, 2.0 * gradient
         else:
             single = single + at_beta @ beta.features
-            gradient = gradient + _antisymmetric_transition(self._right, tilted_beta * self._scale, beta)
+            gradient = gradient + _antisymmetric_transition(
+                self._right, tilted_beta * self._scale, beta, self._workspace
+            )
         return second, np.concatenate([packed, single], axis=1), gradient
 
 
@@ -144,18 +154,27 @@ def _table(kind: np.dtype, table: Array, second_last: Array | float, last: Array
     return result
 
 
-def _antisymmetric_transition(left: Array, right: Array, spin: Strings) -> Array:
+def _antisymmetric_transition(left: Array, right: Array, spin: Strings, workspace: Workspace) -> Array:
     """2 (D_pq − D_qp), D_pq = Σ_r ⟨left_r| a†_p a_q |right_r⟩ in one spin, (K, strings, R) → (K, n, n)."""
     n = spin.orbitals
     if spin.electrons in (0, n):
         return np.zeros((len(left), n, n))
     # Below half filling ⟨a_p left|a_q right⟩; above it −⟨a†_q left|a†_p right⟩, which has fewer strings.
-    bras, kets = (_ladder(vectors, spin).reshape(len(left), n, -1) for vectors in (left, right))
+    bras, kets = (
+        _ladder(vectors, spin, name, workspace).reshape(len(left), n, -1)
+        for vectors, name in ((left, "bras"), (right, "kets"))
+    )
     transition = (bras @ kets.swapaxes(1, 2)).astype(np.float64)
     return 2.0 * (transition - transition.swapaxes(1, 2))
 
 
-def _ladder(vectors: Array, spin: Strings) -> Array:
+def _ladder(vectors: Array, spin: Strings, name: str, workspace: Workspace) -> Array:
     """All a_p (or a†_p) on vectors (K, strings, R): one gather from the vectors, their negatives and a zero row."""
-    zero = np.zeros_like(vectors[:, :1])
-    return np.concatenate([vectors, -vectors, zero], axis=1).take(spin.ladder, axis=1)
+    count, rows, columns = vectors.shape
+    signed = workspace.array("signed", (count, 2 * rows + 1, columns), vectors.dtype)
+    signed[:, :rows] = vectors
+    np.negative(vectors, out=signed[:, rows:-1])
+    signed[:, -1] = 0.0
+    result = workspace.array(name, (count, len(spin.ladder), columns), vectors.dtype)
+    # Mode "clip" avoids a buffered copy; every index is in range.
+    return np.take(signed, spin.ladder, axis=1, out=result, mode="clip")

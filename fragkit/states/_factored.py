@@ -4,13 +4,14 @@ A vector c (alpha strings × beta strings) is stored as L diag(s) Rᵀ. Its rank
 plus the number of single excitations for CISD), so that rotating the factors costs far less than rotating c.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import lru_cache
 from math import comb
 
 import numpy as np
 
 from fragkit.states._strings import Array, Index, compound_matrix, minors, occupied_orbitals, string_ranks
+from fragkit.states._workspace import Workspace
 
 _SMALL = 700  # up to this many strings a full decomposition is affordable
 _PROBES = 320  # columns of the random probe that looks for low rank in larger vectors
@@ -24,6 +25,7 @@ class FactoredVector:
     left: "Factor"
     right: "Factor"
     scale: Array
+    workspace: Workspace = field(default_factory=Workspace)
 
     @property
     def symmetric(self) -> bool:
@@ -113,7 +115,7 @@ class Factor:
         self._source = source
         self._casts: dict[np.dtype, tuple[Array, Array]] = {}
 
-    def rotated(self, rotations: Array) -> Array:
+    def rotated(self, rotations: Array, workspace: Workspace) -> Array:
         """(K, strings, R) images up to a common sign of each rotation; in the precision of `rotations`.
 
         Column J of the compound matrix is the antisymmetrised product of k columns of U, so the first half of J and
@@ -129,18 +131,20 @@ class Factor:
             # A sign common to the whole vector does not matter, so the determinant of U is left out.
             return compound_matrix(rotations, self.electrons) @ self.matrix.astype(rotations.dtype)
         else:
-            image = self._by_halves(rotations, table)
+            image = self._by_halves(rotations, table, workspace)
         if not self._holes:
             return image
         return (self._signs.astype(rotations.dtype) * image[:, ::-1]).astype(rotations.dtype, copy=False)
 
-    def _by_halves(self, rotations: Array, table: Array) -> Array:
+    def _by_halves(self, rotations: Array, table: Array, workspace: Workspace) -> Array:
         split = _split(self.orbitals, self._count)
         head = minors(rotations, split.head)
         tail = head if split.tail == split.head else minors(rotations, split.tail)
         k, (p, q, r) = len(rotations), table.shape
         head = np.ascontiguousarray(head[:, : split.heads]).reshape(k * split.heads, p)
-        half = (head @ table.reshape(p, q * r)).reshape(k, split.heads, q, r)
+        half = workspace.array("half", (len(head), q * r), table.dtype)
+        np.matmul(head, table.reshape(p, q * r), out=half)
+        half = half.reshape(k, split.heads, q, r)
         tail = np.ascontiguousarray(tail[:, split.tail_order])
         parts = []
         for start, stop, count in split.groups:
