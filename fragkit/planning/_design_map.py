@@ -14,7 +14,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Hamiltonian, pair_indices
+from fragkit.core import Hamiltonian, pair_indices, unpack_features
 from fragkit.planning._operators import OperatorSpace
 from fragkit.planning._shifts import Shifts, sector_shifts
 from fragkit.states import MaximallyMixedState
@@ -115,6 +115,30 @@ class DesignMap:
     def operators(self, rotation: Array) -> Array:
         """Matrix (rows, F') of one rotation: the operators of `features`, without the shifts."""
         return self.shifts.project(self.space.dense(self.space.pair_columns(rotation), rotation) @ self.features)
+
+    def turning(self, rotation: Array, coefficients: Array) -> Array:
+        """Matrix (rows, n(n−1)/2): change of a fragment's operator with each generator p < q, without the shifts.
+
+        U → U exp(X) with X_pq = x = −X_qp changes the pair columns W_q and W_p by ±2x v, v the packed symmetric product
+        of columns p and q, so that W Y Wᵀ changes by x (v gᵀ + g vᵀ), g = 2 (W Y)_q − 2 (W Y)_p.
+        """
+        space, n = self.space, self.orbitals
+        i, j = self._pairs
+        a, b = self._strict
+        x, y = space.triangle
+        opposite, same, linear = unpack_features(coefficients, n)
+        columns = space.pair_columns(rotation)
+        weights = np.where(i == j, 1.0, np.sqrt(2.0))[:, None]
+        mixed = 0.5 * weights * (rotation[i][:, a] * rotation[j][:, b] + rotation[i][:, b] * rotation[j][:, a])
+        result = np.zeros((space.size, len(a)))
+        change = 2.0 * columns @ (opposite[:, b] - opposite[:, a])
+        result[space.opposite] = (mixed[x] * change[y] + mixed[y] * change[x]) * space.triangle_weights[:, None]
+        change = 2.0 * columns @ (same[:, b] - same[:, a])
+        outer = mixed[:, None] * change
+        outer = (outer + outer.transpose(1, 0, 2)).reshape(space.pairs**2, len(a))
+        result[space.same] = space.antisymmetriser @ outer
+        result[space.linear] = 2.0 * mixed * (linear[b] - linear[a])
+        return self.shifts.project(result)
 
 
 def _completed(space: OperatorSpace, shifts: Shifts, constants: Array) -> Shifts:

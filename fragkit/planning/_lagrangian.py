@@ -15,7 +15,8 @@ from numpy.typing import NDArray
 
 from fragkit.core import pair_indices
 from fragkit.planning._design_map import DesignMap
-from fragkit.planning._lagrangian_refresh import Covariances, Refresh
+from fragkit.planning._lagrangian_covariances import Covariances, cayley
+from fragkit.planning._lagrangian_refresh import Refresh
 
 Array = NDArray[np.float64]
 
@@ -84,7 +85,7 @@ class Lagrangian:
         by_scaled = np.matmul(by_coefficients[:, None, :], base.scale)[:, 0, :]
         by_turning = inverse_shares[:, None, None] * turning - found.gradient
         p, q = self._pairs
-        gradient = np.concatenate([(by_turning[:, p, q] * base.steps[:, None]).ravel(), by_scaled.ravel()])
+        gradient = np.concatenate([(by_turning[:, p, q] * base.steps).ravel(), by_scaled.ravel()])
         cost = float(total**2)
         return Point(rotations, scaled, cost + penalty, cost, gradient, added, moments)
 
@@ -92,7 +93,7 @@ class Lagrangian:
         """Rotations and scaled coefficients after a step from `point`; rotations by Cayley's map."""
         p, q = self._pairs
         count, n = len(point.rotations), self._design.orbitals
-        turns = direction[: count * len(p)].reshape(count, len(p)) * self.base.steps[:, None]
+        turns = direction[: count * len(p)].reshape(count, len(p)) * self.base.steps
         generators = np.zeros((count, n, n))
         generators[:, p, q] = turns
         generators[:, q, p] = -turns
@@ -101,11 +102,5 @@ class Lagrangian:
     def largest_turn(self, direction: Array) -> float:
         """Largest rotation angle, in radian, that a step makes between two orbitals."""
         count, pairs = len(self.base.steps), len(self._pairs[0])
-        turns = np.abs(direction[: count * pairs].reshape(count, pairs)) * self.base.steps[:, None]
+        turns = np.abs(direction[: count * pairs].reshape(count, pairs)) * self.base.steps
         return float(np.max(turns, initial=0.0))
-
-
-def cayley(rotations: Array, generators: Array) -> Array:
-    """U (1 − X/2)⁻¹ (1 + X/2), equal to U exp(X) to second order; orthogonal for antisymmetric X."""
-    unit = np.eye(rotations.shape[-1])
-    return rotations @ np.linalg.solve(unit - 0.5 * generators, unit + 0.5 * generators)

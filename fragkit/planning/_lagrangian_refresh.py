@@ -12,38 +12,16 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import solve_triangular
 from scipy.linalg.blas import dsymv, dsyrk, ssymv  # pyright: ignore[reportAttributeAccessIssue]
-from scipy.linalg.lapack import dpotrf, dpotri, dpotrs  # pyright: ignore[reportAttributeAccessIssue]
+from scipy.linalg.lapack import dpotrf, dpotri, dpotrs, dtrtrs  # pyright: ignore[reportAttributeAccessIssue]
 
 from fragkit.core import InputError
 from fragkit.planning._design_map import DesignMap
-from fragkit.states import ReferenceState
+from fragkit.planning._lagrangian_covariances import Covariances, variance_curvature
 
 Array = NDArray[np.float64]
 
 SINGLE_PRECISION_ROWS = 2000
 """From this many rows on the metric is kept in single precision: it is only a metric, and reading it costs time."""
-
-FLOOR = 1e-9
-"""Covariance of the maximally mixed state that is always added, so that states without fluctuations are usable."""
-
-
-class Covariances:
-    """Variances of fragments on a state, regularised: C + ridge · 1 + floor · C_mixed."""
-
-    def __init__(self, state: ReferenceState, design: DesignMap, ridge: float) -> None:
-        self.state = state
-        self.ridge = ridge
-        self._added = FLOOR * design.mixed + ridge * np.eye(len(design.mixed))
-
-    def matrix(self, rotation: Array) -> Array:
-        """(F, F) covariance of all features in one rotated basis."""
-        return self.state.moments(rotation)[1] + self._added
-
-    def evaluate(self, rotations: Array, coefficients: Array) -> tuple[Array, Array, Array]:
-        """As `ReferenceState.variance_and_gradient`."""
-        variances, products, gradient = self.state.variance_and_gradient(rotations, coefficients)
-        added = coefficients @ self._added
-        return variances + np.einsum("kf,kf->k", added, coefficients), products + added, gradient
 
 
 @dataclass(frozen=True, eq=False)
@@ -67,7 +45,7 @@ class Refresh:
     scaled
         (K, F') the z_m of `coefficients`.
     steps
-        (K,) unit of length of the rotation generators.
+        (K, n(n−1)/2) unit of length of each rotation generator, one over the root of the cost's curvature along it.
     """
 
     rotations: Array
@@ -129,6 +107,11 @@ def refresh(
     scale = roots * (design.features @ halves.transpose(0, 2, 1))
     coefficients = np.einsum("kfr,kr->kf", scale, response)
     left = design.residual(rotations, coefficients)
+    curvature = variance_curvature(covariances, rotations, coefficients) / weights[:, None]
+    for m, rotation in enumerate(rotations):
+        moved, _ = dtrtrs(factor, design.turning(rotation, coefficients[m]), lower=1)
+        curvature[m] += 2.0 * np.einsum("rp,rp->p", moved, moved)
+    curvature += 2.0 * np.maximum(weights, 1e-2 / count)[:, None] * total**2
     inverse, _ = dpotri(factor, lower=1, overwrite_c=1)
     return Refresh(
         rotations=rotations,
@@ -140,6 +123,6 @@ def refresh(
         scale=scale,
         unscale=np.linalg.pinv(scale),
         scaled=response,
-        steps=1.0 / np.sqrt(2.0 * np.maximum(weights, 1e-2 / count) * total**2),
+        steps=1.0 / np.sqrt(curvature),
         _inverse=inverse.astype(np.float32) if size >= SINGLE_PRECISION_ROWS else inverse,
     )

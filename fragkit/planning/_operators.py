@@ -71,12 +71,12 @@ class OperatorSpace:
 
         `same` is a pair matrix of T before antisymmetrisation.
         """
-        x, y = self._triangle
+        x, y = self.triangle
         p, q = pair_indices(self.orbitals)
         return np.concatenate(
             [
-                opposite[x, y] * self._triangle_weights,
-                self._antisymmetriser @ same.ravel(),
+                opposite[x, y] * self.triangle_weights,
+                self.antisymmetriser @ same.ravel(),
                 one_body[p, q] * np.where(p == q, 1.0, np.sqrt(2.0)),
             ]
         )
@@ -84,10 +84,10 @@ class OperatorSpace:
     def pack_adjoint(self, rows: Array) -> tuple[Array, Array, Array]:
         """Transpose of `pack`: symmetric (P, P), (P, P), (n, n) whose inner products with parts sum to rows · pack."""
         size, n = self.pairs, self.orbitals
-        x, y = self._triangle
+        x, y = self.triangle
         opposite = np.zeros((size, size))
-        opposite[x, y] = opposite[y, x] = rows[self.opposite] / self._triangle_weights
-        same = (self._antisymmetriser.T @ rows[self.same]).reshape(size, size)
+        opposite[x, y] = opposite[y, x] = rows[self.opposite] / self.triangle_weights
+        same = (self.antisymmetriser.T @ rows[self.same]).reshape(size, size)
         p, q = pair_indices(n)
         one_body = np.zeros((n, n))
         one_body[p, q] = one_body[q, p] = rows[self.linear] * np.where(p == q, 1.0, np.sqrt(0.5))
@@ -120,15 +120,15 @@ class OperatorSpace:
         n = self.orbitals
         i, j = pair_indices(n)
         a, b = pair_indices(n, strict=True)
-        x, y = self._triangle
+        x, y = self.triangle
         p, q = pair_indices(n)
         result = np.zeros((self.size, n * n + n))
         products = columns[x][:, i] * columns[y][:, j]
         products += np.where(i == j, 0.0, 1.0) * (columns[x][:, j] * columns[y][:, i])
-        result[self.opposite, : len(i)] = products * self._triangle_weights[:, None]
+        result[self.opposite, : len(i)] = products * self.triangle_weights[:, None]
         mixed = columns[:, None, a] * columns[None, :, b]
         mixed = (mixed + mixed.transpose(1, 0, 2)).reshape(self.pairs**2, len(a))
-        result[self.same, len(i) : len(i) + len(a)] = self._antisymmetriser @ mixed
+        result[self.same, len(i) : len(i) + len(a)] = self.antisymmetriser @ mixed
         weights = np.where(p == q, 1.0, np.sqrt(2.0))
         result[self.linear, len(i) + len(a) :] = rotation[p] * rotation[q] * weights[:, None]
         return result
@@ -136,7 +136,7 @@ class OperatorSpace:
     def tensors(self, rows: Array) -> OperatorTensors:
         """The operator as tensors; the same-spin tensor is one of those with the right antisymmetric part."""
         n, size = self.orbitals, self.pairs
-        x, y = self._triangle
+        x, y = self.triangle
         p, q = pair_indices(n)
         weights = np.where(p == q, 1.0, np.sqrt(2.0))
         opposite = np.zeros((size, size))
@@ -158,16 +158,19 @@ class OperatorSpace:
         return self.pack(matrix, matrix, hamiltonian.one_body)
 
     @cached_property
-    def _triangle(self) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
+    def triangle(self) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
+        """Rows and columns of the upper triangle of a pair matrix."""
         return pair_indices(self.pairs)
 
     @cached_property
-    def _triangle_weights(self) -> Array:
-        x, y = self._triangle
+    def triangle_weights(self) -> Array:
+        """√2 off the diagonal."""
+        x, y = self.triangle
         return np.where(x == y, 1.0, np.sqrt(2.0))
 
     @property
-    def _antisymmetriser(self) -> sparse.csr_array:
+    def antisymmetriser(self) -> sparse.csr_array:
+        """Map from flattened pair matrices (P²) of T to same-spin rows."""
         return _same_spin_maps(self.orbitals)[0]
 
 

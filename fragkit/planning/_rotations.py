@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from fragkit.core import Hamiltonian, InputError, as_count, as_positive
 from fragkit.planning._design_map import DesignMap
-from fragkit.planning._lagrangian_refresh import Covariances
+from fragkit.planning._lagrangian_covariances import Covariances
 from fragkit.planning._rotations_file import RotationsFile
 from fragkit.planning._rotations_run import Run
 from fragkit.planning._rotations_start import starting_rotations

@@ -7,7 +7,8 @@ from numpy.typing import NDArray
 
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian import Lagrangian, Point
-from fragkit.planning._lagrangian_refresh import Covariances, Refresh, refresh
+from fragkit.planning._lagrangian_covariances import Covariances
+from fragkit.planning._lagrangian_refresh import Refresh, refresh
 from fragkit.planning._rotations_memory import Memory
 
 Array = NDArray[np.float64]
@@ -15,7 +16,7 @@ Array = NDArray[np.float64]
 MEMORY = 100
 LARGEST_TURN = 0.5  # radian, of one step between two orbitals
 MULTIPLIER_INTERVAL = 15  # steps between updates of the multipliers
-FIRST_PENALTY = 1.5  # κ; the multipliers converge for κ above about 1/2, the steps are longer for small κ
+FIRST_PENALTY = 2.5  # κ; the multipliers converge for κ above about 1/2, the steps are longer for small κ
 LARGEST_PENALTY = 50.0
 SMALL = 1200  # rows up to which a refresh is cheap beside the steps between two of them
 
@@ -110,7 +111,7 @@ class Run:
         count, features = old.scaled.shape
         forward = new.unscale @ old.scale  # z_new = forward z_old
         backward = (old.unscale @ new.scale).transpose(0, 2, 1)  # gradients go the other way
-        ratio = (old.steps / new.steps)[:, None]
+        ratio = old.steps / new.steps
         turns = self._memory.variables - count * features
 
         def mapped(rows: Array, ratios: Array, blocks: Array) -> Array:
