@@ -1,5 +1,7 @@
 """Measurement plans: coefficients, rotations and shots."""
 
+from fragkit.planning._certificate import OptimalityGap as OptimalityGap
+from fragkit.planning._certificate import optimality_gap as optimality_gap
 from fragkit.planning._cost import plan_cost as plan_cost
 from fragkit.planning._exact import Weighting as Weighting
 from fragkit.planning._exact import exact_coefficients as exact_coefficients
