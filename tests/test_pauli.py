@@ -10,10 +10,10 @@ from hypothesis import strategies as st
 from molecules import full_ci, molecule_hamiltonian
 
 import fragkit
+import fragkit.states
 from fragkit.core import Hamiltonian, InputError, MismatchError, symmetrise_two_body
 from fragkit.pauli import (
     PauliTerms,
-    determinants,
     group_covariances,
     group_variance,
     jordan_wigner,
@@ -21,9 +21,10 @@ from fragkit.pauli import (
     measurement_settings,
     overlapping,
     pauli_costs,
+    qubit_state,
     sorted_insertion,
 )
-from fragkit.pauli import _variance as variance_module
+from fragkit.pauli import _moments as moments_module
 
 ORDERS = ("interleaved", "blocked")
 LETTERS = {
@@ -113,7 +114,7 @@ def test_eigenstates_have_no_variance(name: str, order: str) -> None:
     """All terms as one group: every string, sign and amplitude must be right for Var H to vanish."""
     ham = molecule_hamiltonian(name)
     terms = jordan_wigner(ham, order=order)
-    state = determinants(full_ci(name)[1], terms, ham.electrons)
+    state = qubit_state(full_ci(name)[1], terms, ham)
     assert group_variance(terms, np.arange(len(terms)), terms.coefficients, state) < 1e-9
 
 
@@ -152,13 +153,14 @@ def dense_state(terms: PauliTerms, electrons: tuple[int, int], vector: np.ndarra
 def test_variances_and_covariances_of_groups(
     order: str, electrons: tuple[int, int], dense_qubits: int, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    monkeypatch.setattr(variance_module, "_DENSE_QUBITS", dense_qubits)
+    monkeypatch.setattr(moments_module, "_DENSE_QUBITS", dense_qubits)
     rng = np.random.default_rng(5)
-    terms = jordan_wigner(random_hamiltonian(3, 2), order=order)
+    ham = random_hamiltonian(3, 2, electrons)
+    terms = jordan_wigner(ham, order=order)
     shape = [[1, 3, 3, 1][k] for k in electrons]
     vector = rng.normal(size=shape)
     vector /= np.linalg.norm(vector)
-    state = determinants(vector, terms, electrons)
+    state = qubit_state(vector, terms, ham)
     psi = dense_state(terms, electrons, vector)
     groups = sorted_insertion(terms, "commuting")
     covariances = group_covariances(terms, groups, state)
@@ -237,7 +239,7 @@ def test_split_is_exact_and_as_cheap_as_a_convex_solver_finds() -> None:
 
     ham = molecule_hamiltonian("H4")
     terms = jordan_wigner(ham, order="interleaved")
-    state = determinants(full_ci("H4")[1], terms, ham.electrons)
+    state = qubit_state(full_ci("H4")[1], terms, ham)
     groups = overlapping(terms, sorted_insertion(terms, "commuting"))
     covariances = group_covariances(terms, groups, state)
     split = least_cost_split(terms, groups, covariances, tolerance=1e-4)
@@ -268,7 +270,7 @@ def test_split_is_exact_and_as_cheap_as_a_convex_solver_finds() -> None:
 def test_unfinished_split_says_so() -> None:
     ham = molecule_hamiltonian("LiH")
     terms = jordan_wigner(ham, order="interleaved")
-    state = determinants(full_ci("LiH")[1], terms, ham.electrons)
+    state = qubit_state(full_ci("LiH")[1], terms, ham)
     groups = overlapping(terms, sorted_insertion(terms, "commuting"))
     covariances = group_covariances(terms, groups, state)
     split = least_cost_split(terms, groups, covariances, iterations=2)
@@ -329,6 +331,58 @@ def test_costs_do_not_depend_on_the_signs_of_the_state_or_its_container() -> Non
     assert repr(found).startswith("PauliCosts(commuting, 631 terms in ")
 
 
+@pytest.mark.parametrize("order", ORDERS)
+@pytest.mark.parametrize("electrons", [(1, 1), (2, 1)])
+def test_noise_and_mixtures_by_density_matrices(order: str, electrons: tuple[int, int]) -> None:
+    ham = random_hamiltonian(3, 9, electrons)
+    state = fragkit.reference_state(ham, "fci", noise=0.2)
+    terms = jordan_wigner(ham, order=order)
+    shape = [[1, 3, 3, 1][k] for k in electrons]
+    pure, other = state.states
+    basis = [dense_state(terms, electrons, row.reshape(shape)) for row in np.eye(int(np.prod(shape)))]
+    psi = dense_state(terms, electrons, pure.vector)
+    assert state.weights == pytest.approx((0.8, 0.2))
+    assert type(other).__name__ == "MaximallyMixedState"
+    density = 0.8 * np.outer(psi, psi) + 0.2 * sum(np.outer(b, b) for b in basis) / len(basis)
+    groups = sorted_insertion(terms, "commuting")
+    found = qubit_state(state, terms, ham)
+    for group, covariance in zip(groups, group_covariances(terms, groups, found), strict=True):
+        matrices = [dense(terms.label(k)) for k in group]
+        means = np.array([np.trace(density @ m).real for m in matrices])
+        products = np.array([[np.trace(density @ a @ b).real for b in matrices] for a in matrices])
+        expected = products - np.outer(means, means)
+        assert np.max(np.abs(covariance - expected)) < 1e-12
+        weights = terms.coefficients[group]
+        assert group_variance(terms, group, weights, found) == pytest.approx(weights @ expected @ weights, abs=1e-10)
+
+
+def test_determinants_need_no_vector() -> None:
+    ham = molecule_hamiltonian("LiH")
+    vector = np.zeros((15, 15))
+    vector[0, 0] = 1.0
+    found = pauli_costs(ham, fragkit.reference_state(ham, "hf"), "commuting")
+    assert found.cost == pytest.approx(pauli_costs(ham, vector, "commuting").cost, rel=1e-12)
+    # A turned determinant against the same vector, found by turning the Hamiltonian's orbitals the other way.
+    rotation = np.linalg.qr(np.random.default_rng(0).normal(size=(6, 6)))[0]
+    turned = fragkit.states.DeterminantState(rotation[:, :2], rotation[:, :2])
+    lowest = fragkit.states.DeterminantState.lowest(6, (2, 2))
+    terms, everything = jordan_wigner(ham), jordan_wigner(ham.rotated(rotation))
+    variances = [
+        group_variance(one, np.arange(len(one)), one.coefficients, qubit_state(state, one, here))
+        for one, state, here in ((terms, turned, ham), (everything, lowest, ham.rotated(rotation)))
+    ]
+    # Var H in one state does not depend on the orbitals it is written in.
+    assert variances[0] == pytest.approx(variances[1], rel=1e-8)
+
+
+def test_noise_raises_the_cost() -> None:
+    ham = molecule_hamiltonian("H4")
+    clean, noisy = (
+        pauli_costs(ham, fragkit.reference_state(ham, "fci", noise=p), "overlapping").cost for p in (0.0, 0.01)
+    )
+    assert clean < noisy < 2 * clean
+
+
 def test_blocked_order_changes_neither_terms_nor_the_split_by_much() -> None:
     ham, vector = molecule_hamiltonian("H4"), full_ci("H4")[1]
     one, other = (pauli_costs(ham, vector, "overlapping", order=order) for order in ORDERS)
@@ -347,8 +401,8 @@ def test_what_is_refused() -> None:
         pauli_costs(ham, np.ones((2, 3)))
     with pytest.raises(InputError, match="`state` must be normalised"):
         pauli_costs(ham, 2 * vector)
-    with pytest.raises(InputError, match=r"CI vector or a state with one .got MixedState"):
-        pauli_costs(ham, fragkit.reference_state(ham, "fci", noise=0.1))
+    with pytest.raises(InputError, match=r"must be a CI vector, a CIState.*got str"):
+        pauli_costs(ham, "fci")
     other = Hamiltonian(0.0, ham.one_body, ham.two_body, electrons=ham.electrons)
     with pytest.raises(MismatchError, match="must belong to this Hamiltonian"):
         pauli_costs(other, fragkit.reference_state(ham, "fci"))

@@ -5,11 +5,12 @@ from typing import Any
 
 import numpy as np
 
-from fragkit.core import Hamiltonian, InputError, MismatchError, as_positive, frozen
+from fragkit.core import Hamiltonian, InputError, as_positive, frozen
 from fragkit.pauli._groups import CONFLICTS, Indices, overlapping, sorted_insertion
-from fragkit.pauli._split import group_covariances, least_cost_split
+from fragkit.pauli._moments import group_covariances, group_variance
+from fragkit.pauli._split import least_cost_split
+from fragkit.pauli._state import qubit_state
 from fragkit.pauli._terms import Array, PauliTerms, jordan_wigner
-from fragkit.pauli._variance import determinants, group_variance
 
 GROUPINGS = (*CONFLICTS, "overlapping")
 
@@ -74,8 +75,8 @@ def pauli_costs(
     hamiltonian
         At most 31 orbitals.
     state
-        A pure state with a CI vector (`fragkit.reference_state(ham, "fci")`), or the vector itself, alpha strings ×
-        beta strings in the order of their binary numbers, bit 0 the lowest orbital, as pyscf has it.
+        A state of `fragkit.reference_state(ham, …)` with or without noise, or a CI vector, alpha strings × beta strings
+        in the order of their binary numbers, bit 0 the lowest orbital, as pyscf has it.
     grouping
         "qubit-wise", "commuting" or "overlapping".
     order
@@ -85,7 +86,7 @@ def pauli_costs(
     Raises
     ------
     InputError
-        If `grouping` or `order` is not known or the state has no CI vector or not the right one.
+        If `grouping` or `order` is not known, or the state is of another kind, shape or norm.
     MismatchError
         If the state was made for another Hamiltonian.
 
@@ -99,13 +100,13 @@ def pauli_costs(
     if grouping not in GROUPINGS:
         raise InputError(f"`grouping` must be one of {', '.join(map(repr, GROUPINGS))} (got {grouping!r})")
     terms = jordan_wigner(hamiltonian, order=order)
-    amplitudes = determinants(_vector(hamiltonian, state), terms, hamiltonian.electrons)
+    on_qubits = qubit_state(state, terms, hamiltonian)
     if grouping == "overlapping":
         groups = overlapping(terms, sorted_insertion(terms, "commuting"))
-        split = least_cost_split(terms, groups, group_covariances(terms, groups, amplitudes))
+        split = least_cost_split(terms, groups, group_covariances(terms, groups, on_qubits))
         return _result(grouping, terms, groups, split.deviations, split.lower_bound, split.converged, split.message)
     groups = sorted_insertion(terms, grouping)
-    variances = [group_variance(terms, group, terms.coefficients[group], amplitudes) for group in groups]
+    variances = [group_variance(terms, group, terms.coefficients[group], on_qubits) for group in groups]
     return _result(grouping, terms, groups, np.sqrt(variances), None, True, "sorted insertion")
 
 
@@ -129,20 +130,3 @@ def _result(
         converged=converged,
         message=message,
     )
-
-
-def _vector(hamiltonian: Hamiltonian, state: Any) -> Any:
-    if isinstance(state, np.ndarray | list):
-        return state
-    if not hasattr(state, "vector"):
-        raise InputError(
-            f"`state` must be a CI vector or a state with one (got {type(state).__name__}); Pauli strings leave the "
-            'electron-number sector, so use reference_state(hamiltonian, "fci") or "cisd" without noise'
-        )
-    digest = getattr(state, "hamiltonian_digest", None)
-    if digest is not None and digest != hamiltonian.digest:
-        raise MismatchError(
-            f"`state` must belong to this Hamiltonian (got a state of {digest[:12]}, Hamiltonian "
-            f"{hamiltonian.digest[:12]}); make it again for these integrals"
-        )
-    return state.vector

@@ -8,7 +8,6 @@ from scipy.linalg import cho_factor, cho_solve
 from fragkit.core import InputError
 from fragkit.pauli._groups import Indices
 from fragkit.pauli._terms import Array, PauliTerms
-from fragkit.pauli._variance import Determinants, string_signs
 
 
 @dataclass(frozen=True, eq=False, repr=False)
@@ -37,12 +36,6 @@ class Split:
     iterations: int
     converged: bool
     message: str
-
-
-def group_covariances(terms: PauliTerms, groups: list[Indices], state: Determinants) -> list[Array]:
-    """Covariance matrix of the strings of each group (members commute), real and dimensionless."""
-    position = _Positions(state)
-    return [_covariance(terms, group, state, position) for group in groups]
 
 
 def least_cost_split(
@@ -102,45 +95,6 @@ def _divide(wanted: Array, groups: list[Indices], inverses: list[Array], shares:
     images = [inverse @ price[group] for group, inverse in zip(groups, inverses, strict=True)]
     worth = max(float(price[group] @ image) for group, image in zip(groups, images, strict=True))
     return [share * image for share, image in zip(shares, images, strict=True)], float(wanted @ price) ** 2 / worth
-
-
-class _Positions:
-    """Where a basis state stands in the list of determinants, −1 if it is not there."""
-
-    def __init__(self, state: Determinants) -> None:
-        self.labels = state.labels
-
-    def of(self, labels: np.ndarray) -> np.ndarray:
-        place = np.minimum(np.searchsorted(self.labels, labels), len(self.labels) - 1)
-        return np.where(self.labels[place] == labels, place, -1)
-
-
-def _covariance(terms: PauliTerms, group: Indices, state: Determinants, position: _Positions) -> Array:
-    rank = np.argsort(terms.x[group], kind="stable")
-    ordered = group[rank]
-    masks = terms.x[ordered]
-    starts = np.flatnonzero(np.r_[True, np.diff(masks) != 0])
-    stops = np.r_[starts[1:], len(ordered)]
-    images = string_signs(terms, ordered, state.labels) * state.amplitudes
-    products = np.zeros((len(ordered), len(ordered)))
-    for k, (a, b) in enumerate(zip(starts, stops, strict=True)):
-        for c, d in zip(starts[k:], stops[k:], strict=True):
-            # P_a|b⟩ sits at b ⊕ x_a, which the other string reaches from b ⊕ x_a ⊕ x_c.
-            if c == a:
-                products[a:b, a:b] = images[a:b] @ images[a:b].T
-                continue
-            source = position.of(state.labels ^ (masks[a] ^ masks[c]))
-            here = np.flatnonzero(source >= 0)
-            products[a:b, c:d] = images[a:b, here] @ images[c:d, source[here]].T
-            products[c:d, a:b] = products[a:b, c:d].T
-    means = np.zeros(len(ordered))
-    for a, b in zip(starts, stops, strict=True):
-        target = position.of(state.labels ^ masks[a])
-        here = np.flatnonzero(target >= 0)
-        means[a:b] = images[a:b, here] @ state.amplitudes[target[here]]
-    covariance = np.zeros_like(products)
-    covariance[np.ix_(rank, rank)] = products - np.outer(means, means)
-    return covariance
 
 
 def _inverse(matrix: Array, regularisation: float) -> Array:
