@@ -143,15 +143,15 @@ def optimality_gap(
             found = exact_coefficients(hamiltonian, rotations, covariances, start=shares, tolerance=1e-4)
             if found.relative_residual > 1e-6:
                 raise InputError(
-                    f"`plan` must reproduce its Hamiltonian (got a relative residual of {found.relative_residual:.2g}); "
-                    "make one with more circuits"
+                    "`plan` must have rotations that reproduce its Hamiltonian (got a relative residual of "
+                    f"{found.relative_residual:.2g}); make one with more circuits"
                 )
             enlarged = found.cost
             if enlarged == 0.0:
                 done = True
                 break
             maxima, sizes = search.maxima(_starting_points(rotations, starts, generator), found.dual)
-            # On the design's own rotations φ ≤ 1 holds to the tolerance of its weights, which `lower_bound` accounts for.
+            # On the rotations of the design itself φ ≤ 1, but for the tolerance that `lower_bound` has taken in.
             bound = max(bound, found.lower_bound / max(1.0, float(np.max(sizes))))
             if bar is not None:
                 bar.set_postfix_str(f"cost {enlarged:.4g}, bound {bound:.4g} Ha^2", refresh=False)
