@@ -3,6 +3,7 @@
 import json
 import sys
 import time
+from pathlib import Path
 
 import numpy as np
 import openqasm3
@@ -233,3 +234,32 @@ def test_mid_size_plan_is_compiled_and_written_in_time(tmp_path):
     export_angles(tmp_path / "angles.json", fragments, constant=0.0, electrons=(5, 5))
     assert time.perf_counter() - start < 5.0
     assert len(list(tmp_path.glob("*.qasm"))) == 60
+
+
+def test_the_numpy_example_of_the_documentation_gives_the_estimate(tmp_path, monkeypatch, capsys):
+    """The code block of docs/circuits.md is run as it stands on counts of an invented two-fragment Hamiltonian."""
+    import fragkit
+
+    page = (Path(__file__).parents[1] / "docs" / "circuits.md").read_text(encoding="utf-8")
+    section = page.split("### The estimate without this package")[1]
+    code = section.split("```python\n")[1].split("```")[0]
+
+    ham = fragkit.hubbard(3, hopping=1.0, repulsion=2.0, electrons=(2, 1))
+    state = fragkit.reference_state(ham, "fci")
+    plan = fragkit.plan(ham, state, fragments=fragkit.fragment(ham, fragkit.LowRank()), total_shots=3000)
+    counts = fragkit.simulate(plan, state, rng=5)
+    tables = [counts.strings(k) for k in range(len(plan))]
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "counts.json").write_text(json.dumps(tables))
+    export_angles(
+        "circuits.json",
+        plan.fragments,
+        constant=plan.constant,
+        electrons=plan.electrons,
+        sector_exact=plan.sector_exact,
+    )
+    exec(code, {})
+    energy, error = (float(word) for word in capsys.readouterr().out.split())
+    estimate = plan.estimate(counts)
+    assert energy == pytest.approx(estimate.energy, abs=1e-10)
+    assert error == pytest.approx(estimate.standard_error, rel=1e-2)
