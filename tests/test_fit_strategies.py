@@ -1,5 +1,7 @@
 """Fragments by LowRank, Greedy and Joint: they sum to the Hamiltonian, as few as promised, and say how they ended."""
 
+from itertools import pairwise
+
 import numpy as np
 import pytest
 from hypothesis import given
@@ -61,7 +63,7 @@ def test_the_sum_of_exact_fragments_has_the_full_ci_energy(strategy: Strategy, o
     assert abs(energy_of(fragments.to_hamiltonian()) - energy_of(molecule_hamiltonian("LiH"))) < 1e-7
 
 
-# The most fragments that a plain greedy search needed for a relative residual of 1e-3, computed apart from this package.
+# What a plain greedy search needed for a relative residual of 1e-3, computed apart from this package.
 @pytest.mark.parametrize(("name", "most"), [("LiH", 16), ("H2O", 22), ("NH3", 29)])
 def test_greedy_needs_no_more_fragments_than_a_plain_greedy_search(name: str, most: int) -> None:
     hamiltonian = molecule_hamiltonian(name)
@@ -77,7 +79,7 @@ def test_greedy_residual_never_rises(refit: bool) -> None:
     norms = [np.linalg.norm(hamiltonian.two_body)]
     for count in range(1, 7):
         norms.append(fragment(hamiltonian, Greedy(count=count, tol=1e-12, refit=refit)).residual_norm)
-    assert all(after <= before * (1 + 1e-12) for before, after in zip(norms, norms[1:], strict=False))
+    assert all(after <= before * (1 + 1e-12) for before, after in pairwise(norms))
     assert norms[-1] < norms[0]
 
 
