@@ -10,7 +10,7 @@ from typing import Any
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from molecules import molecule_hamiltonian
 
@@ -360,3 +360,21 @@ def test_places_that_cannot_be_written(tmp_path: Path, name: str, message: str) 
 def test_path_must_be_a_name(path: Any) -> None:
     with pytest.raises(InputError, match="must be a file name"):
         write_atomically(path, "x")
+
+
+@given(cut=st.integers(0, 4000), length=st.integers(0, 60), inserted=st.text('0123456789.-+eE"[]{}, nul:', max_size=8))
+@settings(max_examples=200)
+def test_any_damage_is_an_input_error(
+    tmp_path_factory: pytest.TempPathFactory, cut: int, length: int, inserted: str
+) -> None:
+    """Whatever is cut out of a plan or put into it, the file is refused or the plan is the same."""
+    folder = tmp_path_factory.getbasetemp()
+    plan = some_plan(count=2)
+    plan.save(folder / "whole.json", overwrite=True)
+    text = (folder / "whole.json").read_text(encoding="utf-8")
+    (folder / "damaged.json").write_text(text[:cut] + inserted + text[cut + length :], encoding="utf-8")
+    try:
+        back = load_plan(folder / "damaged.json")
+    except InputError:
+        return
+    assert_same(back, plan)

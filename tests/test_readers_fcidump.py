@@ -4,7 +4,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from molecules import FULL_CI, energy_of, mean_field, molecule_hamiltonian
 
@@ -251,3 +251,21 @@ def test_hamiltonian_from_factors_is_written_as_a_tensor(tmp_path: Path) -> None
     )
     back = fragkit.from_fcidump(fragkit.to_fcidump(by_factors, tmp_path / "f"))
     assert np.max(np.abs(back.two_body - ham.two_body)) < 1e-10
+
+
+@given(
+    cut=st.integers(0, 400), length=st.integers(0, 40), inserted=st.text("0123456789.-+DEe&/=,( \nnaiNORB", max_size=12)
+)
+@settings(max_examples=200)
+def test_damage_is_an_input_error_or_leaves_a_valid_hamiltonian(
+    tmp_path_factory: pytest.TempPathFactory, cut: int, length: int, inserted: str
+) -> None:
+    """Whatever is cut out of a file or put into it, nothing but InputError is raised."""
+    text = HEADER + BODY
+    path = write(tmp_path_factory.getbasetemp(), text[:cut] + inserted + text[cut + length :])
+    try:
+        ham = fragkit.from_fcidump(path)
+    except InputError:
+        return
+    assert np.all(np.isfinite(ham.two_body))
+    assert np.isfinite(ham.determinant_energy())
