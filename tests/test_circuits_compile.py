@@ -174,6 +174,14 @@ def test_cheapest_order_never_costs_more_and_leaves_no_signs(rotation):
     np.testing.assert_array_equal(circuit.signs, 1.0)
 
 
+@pytest.mark.parametrize("tolerance", [0.0, 1e-3, 0.5, 2.0])
+def test_any_tolerance_gives_a_permutation(tolerance):
+    for n in (1, 2, 5, 9):
+        order, signs = cheapest_order(random_rotation(n, np.random.default_rng(n)), tolerance)
+        assert sorted(order.tolist()) == list(range(n))
+        assert set(np.abs(signs)) == {1.0}
+
+
 def test_reordered_fragment_is_the_same_operator_and_the_saving_is_reported():
     rng = np.random.default_rng(4)
     matrix = block_rotation([0, 1, 0, 1], rng)
@@ -360,6 +368,11 @@ BAD_ARGUMENTS = [
     (lambda r: rotation_circuits([r], qubit_map=[0, 1, 2, 3, 4, 4]), "more than once"),
     (lambda r: rotation_circuits([r], qubit_map=[0, 1, 2, 3, 4, -1]), r"qubit_map\[5\]"),
     (lambda r: rotation_circuits([r], couplings=[(0, 1), (3, 4), (4, 5)]), "qubits 1 and 2"),
+    (lambda r: rotation_circuits([r], couplings=[(0, 1), 2]), r"couplings\[1\]"),
+    (lambda r: rotation_circuits([r], couplings=[(0, 0)]), "different qubits"),
+    (lambda r: rotation_circuits([r], couplings=[("a", "b")]), "whole number"),
+    (lambda r: rotation_circuits([r])[0].to_openqasm3(preparation="OPENQASM 3.0;\nx q[0];"), "leave that line out"),
+    (lambda r: rotation_circuits([r])[0].to_openqasm2(preparation="qreg q[6];"), "leave that line out"),
     (lambda r: rotation_circuits([r], angle_tolerance=-1.0), "`angle_tolerance`"),
     (lambda r: rotation_circuits([r], angle_tolerance=1.0), "`angle_tolerance`"),
     (lambda r: rotation_circuits([r], angle_tolerance="small"), "`angle_tolerance`"),

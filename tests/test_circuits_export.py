@@ -46,6 +46,17 @@ def test_program_is_joined_to_a_preparation_and_says_where_it_comes_from():
     assert (bare.bits, bare.measured) == (0, {})
 
 
+def test_circuits_of_a_plan_name_the_plan_and_its_shots():
+    from fragkit import Plan
+
+    fragments = tuple(random_fragments(3, 2))
+    plan = Plan(fragments, 0.0, [70, 30], [0.1, 0.2], (2, 1), "digest of integrals", 0.0, 0.0)
+    text = plan.circuits(provenance={"state": "invented"})[1].to_openqasm3()
+    for line in ("circuit: 1 of 0 ... 1", "shots: 30", f"plan digest: {plan.digest}", "state: invented"):
+        assert f"// {line}\n" in text
+    assert "// Hamiltonian digest: digest of integrals\n" in text
+
+
 def test_angles_survive_the_text_to_the_last_bit():
     (circuit,) = rotation_circuits([random_rotation(6, np.random.default_rng(1))])
     written = [arguments[0] for _, arguments, _ in Program(circuit.to_openqasm3()).calls]

@@ -58,6 +58,26 @@ def from_openqasm2(text):
 
 
 @pytest.mark.parametrize("layout", ["blocked", "interleaved"])
+@pytest.mark.parametrize("name", ["LiH", "H2O"])
+def test_rotations_of_molecules_with_the_full_ci_state(name, layout):
+    """Fragments with symmetry zeros and degeneracies, in the form that plans use: OpenQASM 3, reference parser."""
+    from fragkit import LowRank, fragment
+    from fragkit.core import cheapest_form
+
+    hamiltonian = molecule_hamiltonian(name)
+    n, electrons = hamiltonian.orbitals, hamiltonian.electrons
+    vector = occupied_vector(full_ci(name)[1], n, electrons)
+    state = qubit_state(vector, n, electrons, layout)
+    fragments = [cheapest_form(f) for f in fragment(hamiltonian, LowRank(tol=1e-8))][::4]
+    for form, circuit in zip(fragments, rotation_circuits(fragments, layout=layout), strict=True):
+        program = Program(circuit.to_openqasm3())
+        final = run_qiskit(program.to_qiskit(), state)
+        measured = [program.measured[j] for j in range(2 * n)]
+        expected = rotated_probabilities(vector, form.rotation, n, electrons)
+        np.testing.assert_allclose(in_bit_order(final, measured), expected, atol=1e-9)
+
+
+@pytest.mark.parametrize("layout", ["blocked", "interleaved"])
 @pytest.mark.parametrize("readout", ["fixed", "free"])
 def test_heisenberg_picture_agrees_with_openfermion(layout, readout):
     """W† n_j W is the occupation operator of new orbital j, as OpenFermion's Jordan-Wigner matrices say."""

@@ -5,6 +5,7 @@ X⊗Y − Y⊗X; a quarter turn about x makes Y⊗Y into Z⊗Z, and a CNOT makes
 enough.
 """
 
+import re
 from collections.abc import Iterable, Sequence
 
 from fragkit.circuits._circuit import RotationCircuit
@@ -25,8 +26,9 @@ def openqasm3(circuit: RotationCircuit, *, preparation: str = "", measure: bool 
     circuit
         The circuit.
     preparation
-        OpenQASM 3 statements that prepare the state on the register `q`, inserted before the rotations. Without
-        them the program starts from all qubits at zero and is meant to be joined to a preparation.
+        OpenQASM 3 statements that prepare the state on the register `q`, inserted before the rotations; gate
+        definitions are allowed, a header or a declaration of `q` is not. Without them the program starts from all
+        qubits at zero and is meant to be joined to a preparation.
     measure
         Whether to measure; bit c[j] is then the occupation of new spin-orbital j, alpha first.
 
@@ -132,4 +134,10 @@ def _inserted(preparation: str) -> list[str]:
     if not preparation.isascii():
         bad = next(character for character in preparation if not character.isascii())
         raise InputError(f"`preparation` must be ASCII text (got the character {bad!r})")
+    doubled = re.search(r"^\s*(OPENQASM\b|include\b|qubit\[\d+\]\s*q\s*;|qreg\s+q\b)", preparation, re.MULTILINE)
+    if doubled:
+        raise InputError(
+            "`preparation` must be statements without header and without a declaration of `q`, which the program has "
+            f"already (got {doubled.group(1)!r}); leave that line out"
+        )
     return ["// state preparation", *preparation.strip().splitlines(), "// rotation"]

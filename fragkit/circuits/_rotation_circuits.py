@@ -102,7 +102,7 @@ def rotation_circuits(
     tolerance = _tolerance(angle_tolerance)
     pair = None if electrons is None else as_electrons(electrons, n)
     qubits = _qubits(qubit_map, 2 * n)
-    allowed = None if couplings is None else {frozenset(edge) for edge in couplings}
+    allowed = None if couplings is None else _couplings(couplings)
     notes = _provenance(provenance, len(rotations))
     if frame is not None:
         prepared = as_rotation(frame, n, name="frame")
@@ -149,6 +149,15 @@ def _qubits(qubit_map: Sequence[int] | None, count: int) -> tuple[int, ...]:
         twice = sorted({q for q in qubits if qubits.count(q) > 1})
         raise InputError(f"`qubit_map` must name every qubit once (got {twice} more than once)")
     return qubits
+
+
+def _couplings(couplings: Iterable[tuple[int, int]]) -> set[frozenset[int]]:
+    pairs = set()
+    for k, edge in enumerate(couplings):
+        if not isinstance(edge, Sequence | np.ndarray) or len(edge) != 2 or edge[0] == edge[1]:
+            raise InputError(f"`couplings[{k}]` must be a pair of different qubits (got {edge!r})")
+        pairs.add(frozenset(as_count(qubit, f"couplings[{k}]") for qubit in edge))
+    return pairs
 
 
 def _check_couplings(circuit: RotationCircuit, allowed: set[frozenset[int]]) -> None:

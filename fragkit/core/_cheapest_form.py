@@ -32,10 +32,11 @@ def interchangeable_orbitals(fragment: Fragment, *, tolerance: float = 1e-13) ->
 
     def fits(group: list[int], k: int) -> bool:
         first = group[0]
+        if abs(linear[k] - linear[first]) > allowed:
+            return False
         others = [m for m in range(len(linear)) if m not in group and m != k]
         pairs = same[np.ix_([*group, k], [*group, k])]
         differences = [
-            np.array([linear[k] - linear[first]]),
             opposite[k, others] - opposite[first, others],
             same[k, others] - same[first, others],
             (opposite[np.ix_([*group, k], [*group, k])] - opposite[first, first]).ravel(),

@@ -10,9 +10,6 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import linear_sum_assignment
-from scipy.sparse import csr_array
-from scipy.sparse.csgraph import connected_components
 
 from fragkit.core._elimination import ROUNDING_ZERO, eliminate
 from fragkit.core._validate import as_rotation
@@ -69,7 +66,8 @@ def cheapest_order(rotation: Any, tolerance: float = 1e-8) -> tuple[NDArray[np.i
 def best_column_order(matrix: Array, *, tolerance: float, candidates: Sequence[Sequence[int]] = ()) -> NDArray[np.intp]:
     """The best column order among the built-in candidates and the given ones; see `cheapest_order`."""
     size = len(matrix)
-    zero = max(tolerance, ROUNDING_ZERO)
+    # Every column has an entry of at least 1/√size, so that none is taken for empty.
+    zero = min(max(tolerance, ROUNDING_ZERO), 0.5 / np.sqrt(size))
     nearest = _nearest_permutation(matrix)
     tried: dict[tuple[int, ...], tuple[int, float]] = {}
     for candidate in (
@@ -89,6 +87,8 @@ def best_column_order(matrix: Array, *, tolerance: float, candidates: Sequence[S
 
 def _nearest_permutation(matrix: Array) -> NDArray[np.intp]:
     """Column for each place so that the new orbital overlaps most with the old one there."""
+    from scipy.optimize import linear_sum_assignment  # slow to import, and not needed by most of core
+
     return linear_sum_assignment(matrix**2, maximize=True)[1]
 
 
@@ -123,14 +123,16 @@ def _blocks_in_order(matrix: Array, preferred: NDArray[np.intp], zero: float) ->
     """
     size = len(matrix)
     present = np.abs(matrix) > zero
-    graph = csr_array(
-        np.block([[np.zeros_like(present), present], [present.T, np.zeros_like(present)]]).astype(np.int8)
-    )
-    count, label = connected_components(graph, directed=False)
-    rows = [np.flatnonzero(label[:size] == b) for b in range(count)]
-    columns = [[int(c) for c in preferred if label[size + c] == b] for b in range(count)]
+    # Rows are linked when a column has entries in both; powers of the links reach everything in the block.
+    linked = present @ present.T
+    for _ in range(size.bit_length()):
+        linked = linked @ linked
+    first = np.argmax(linked, axis=1)
+    rows = [np.flatnonzero(first == k) for k in range(size) if first[k] == k]
+    columns = [[int(c) for c in preferred if present[block, c].any()] for block in rows]
+    count = len(rows)
     if count > MOST_BLOCKS:
-        order = sorted(range(count), key=lambda b: float(np.mean(rows[b])) if len(rows[b]) else 0.0)
+        order = sorted(range(count), key=lambda b: float(np.mean(rows[b])))
         return np.array([c for b in order for c in columns[b]], dtype=np.intp)
     # crossings[a, b]: how many rows of b lie above rows of a, which must be crossed if a comes first.
     crossings = np.array([[int(np.sum(below[:, None] > above[None, :])) for above in rows] for below in rows])
