@@ -100,7 +100,7 @@ def test_compound_matrices_are_used_where_the_spread_table_is_too_large(monkeypa
 
 @pytest.mark.parametrize("rank", [3, 20])
 def test_large_vectors_are_factored_by_a_random_probe(rank, monkeypatch):
-    monkeypatch.setattr(_factored, "_SMALL", 0)
+    monkeypatch.setattr(_factored, "SMALL", 0)
     monkeypatch.setattr(_factored, "_PROBES", 6)
     rng = np.random.default_rng(5)
     vector = rng.normal(size=(20, rank)) @ rng.normal(size=(rank, 15))

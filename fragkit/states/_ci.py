@@ -11,7 +11,7 @@ from fragkit.core import Hamiltonian, InputError, as_real_array
 from fragkit.states._assembly import SpinMoments, feature_moments
 from fragkit.states._base import Array, Bits, Expectations, ReferenceState, as_shots, seeded
 from fragkit.states._ci_expectations import CIExpectations
-from fragkit.states._factored import FactoredVector, factor_vector
+from fragkit.states._factored import SMALL, FactoredVector, factor_vector
 from fragkit.states._hamiltonian_action import energy_and_variance
 from fragkit.states._strings import compound_matrix, strings
 
@@ -73,14 +73,24 @@ class CIState(ReferenceState):
         right = left if a == b else compound_matrix(u, b)
         return left @ self.vector @ right.T
 
+    def _probabilities(self, rotation: Any) -> Array:
+        """Probability of each determinant in the rotated orbitals, alpha strings × beta strings."""
+        if max(self.vector.shape) > SMALL:
+            return self.rotated_vector(rotation) ** 2
+        factored = self._factored
+        rotations = self._rotation(rotation)[None]
+        left = factored.left.rotated(rotations, factored.workspace)[0]
+        right = left if factored.symmetric else factored.right.rotated(rotations, factored.workspace)[0]
+        return ((left * factored.scale) @ right.T) ** 2
+
     def moments(self, rotation: Any) -> tuple[Array, Array]:
         """Mean and covariance of all features; see `ReferenceState.moments`."""
-        return weighted_moments(self.rotated_vector(rotation) ** 2, self.orbitals, self.electrons)
+        return weighted_moments(self._probabilities(rotation), self.orbitals, self.electrons)
 
     def sample(self, rotation: Any, shots: int, rng: np.random.Generator | int | None = None) -> Bits:
         """Ideal measurement results; see `ReferenceState.sample`."""
         generator = seeded(rng)
-        weights = np.cumsum((self.rotated_vector(rotation) ** 2).ravel())
+        weights = np.cumsum(self._probabilities(rotation).ravel())
         drawn = np.searchsorted(weights, generator.random(as_shots(shots)) * weights[-1], side="right")
         alpha, beta = (strings(self.orbitals, k) for k in self.electrons)
         rows, columns = np.divmod(np.minimum(drawn, len(weights) - 1), beta.count)

@@ -13,7 +13,7 @@ import numpy as np
 from fragkit.states._strings import Array, Index, compound_matrix, minors, occupied_orbitals, string_ranks
 from fragkit.states._workspace import Workspace
 
-_SMALL = 700  # up to this many strings a full decomposition is affordable
+SMALL = 700  # up to this many strings a full decomposition is affordable
 _PROBES = 320  # columns of the random probe that looks for low rank in larger vectors
 _TABLE_BYTES = 2e8  # largest spread-out table; above it factors are rotated by compound matrices
 
@@ -36,12 +36,12 @@ class FactoredVector:
 def factor_vector(vector: Array, orbitals: int, electrons: tuple[int, int]) -> FactoredVector:
     """Decompose a CI vector; singular values below 1e-14 of the largest are rounding noise and dropped."""
     a, b = electrons
-    if a == b and max(vector.shape) <= _SMALL and np.max(np.abs(vector - vector.T)) < 1e-14:
+    if a == b and max(vector.shape) <= SMALL and np.max(np.abs(vector - vector.T)) < 1e-14:
         scale, basis = np.linalg.eigh(0.5 * (vector + vector.T))
         kept = np.flatnonzero(np.abs(scale) > 1e-14 * np.max(np.abs(scale)))
         factor = Factor(np.ascontiguousarray(basis[:, kept]), orbitals, a)
         return FactoredVector(factor, factor, scale[kept])
-    if max(vector.shape) <= _SMALL:
+    if max(vector.shape) <= SMALL:
         left, scale, right = np.linalg.svd(vector, full_matrices=False)
         kept = scale > 1e-14 * scale[0]
         left, scale, right = left[:, kept], scale[kept], right[kept].T
@@ -155,7 +155,7 @@ class Factor:
     def _cast(self, dtype: np.dtype) -> tuple[Array, Array]:
         if dtype not in self._casts:
             table = self._source if self._table is None else self._table
-            self._casts[dtype] = (self._source.astype(dtype), table.astype(dtype))
+            self._casts[dtype] = (self._source.astype(dtype, copy=False), table.astype(dtype, copy=False))
         return self._casts[dtype]
 
 
