@@ -157,3 +157,18 @@ def test_cisd_vectors_have_the_rank_of_their_single_excitations():
 
 def test_large_determinant_gradient():
     check(DeterminantState.lowest(14, (7, 6)).with_noise(0.01), 8, fragments=2)
+
+
+def test_compressed_state_loses_no_more_than_asked_and_keeps_its_moments():
+    hamiltonian = molecule_hamiltonian("NH3")
+    state = reference_state(hamiltonian, "fci")
+    assert isinstance(state, CIState)
+    small = state.compressed(1e-6)
+    assert np.vdot(small.vector, state.vector) ** 2 >= 1 - 1e-6
+    assert len(small._factored.scale) < 0.6 * len(state._factored.scale)
+    assert small._factored.symmetric
+    assert "rank" in small.description
+    u = random_rotation(8, np.random.default_rng(9))
+    np.testing.assert_allclose(small.moments(u)[0], state.moments(u)[0], atol=5e-3)
+    np.testing.assert_allclose(state.compressed(0.0).vector, state.vector, atol=1e-12)
+    assert len(state.compressed(1.0)._factored.scale) == 1

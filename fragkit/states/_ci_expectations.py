@@ -24,16 +24,15 @@ _BLOCK = 50_000  # determinants in a block
 
 @dataclass(frozen=True, eq=False)
 class _Block:
+    """Determinants of some alpha strings with all beta strings, or from the first of the alpha strings on.
+
+    For a symmetric vector, coefficients off the diagonal are multiplied by √2: their squares count both mirror images.
+    """
+
     start: int
     stop: int
-    first: int  # first beta string of the block
-    vector: Array  # (K, stop − start, beta strings from `first`)
+    vector: Array  # (K, stop − start, beta strings)
     values: Array  # f there
-
-    @property
-    def diagonal(self) -> int:
-        """Number of leading columns whose mirror images lie in the block itself."""
-        return self.stop - self.start
 
 
 class CIExpectations(Expectations):
@@ -42,7 +41,7 @@ class CIExpectations(Expectations):
     def __init__(
         self, factored: FactoredVector, electrons: tuple[int, int], rotations: Array, coefficients: Array
     ) -> None:
-        n = rotations.shape[-1]
+        n, count = rotations.shape[-1], len(rotations)
         kind = rotations.dtype
         alpha, beta = (strings(n, k) for k in electrons)
         self._alpha, self._beta = alpha, beta
@@ -60,88 +59,83 @@ class CIExpectations(Expectations):
         chief = int(np.argmax(np.abs(factored.scale)))
         x, y = (side[:, :, chief].astype(np.float64) ** 2 for side in (self._left, self._right))
         self._offset = np.vecdot(x, at_alpha) + np.vecdot(y, at_beta)
-        self._offset += np.vecdot(np.vecmat(x, towards_beta), y @ beta.occupations)
-        row_values = _table(kind, towards_beta, at_alpha - self._offset[:, None], 1.0, len(rotations))
-        column_values = _table(kind, beta.occupations, 1.0, at_beta, len(rotations))
+        self._offset += np.vecdot((x[:, None, :] @ towards_beta)[:, 0], y @ beta.occupations)
+        row_values = _table(kind, towards_beta, at_alpha - self._offset[:, None], 1.0, count)
+        column_values = _table(kind, beta.occupations, 1.0, at_beta, count).swapaxes(1, 2)
 
-        step = max(1, min(alpha.count, _BLOCK // (beta.count * len(rotations))))
+        step = max(1, min(alpha.count, _BLOCK // (beta.count * count)))
         scaled = self._left * self._scale
-        right, columns = self._right.swapaxes(1, 2), column_values.swapaxes(1, 2)
+        right = self._right * kind.type(np.sqrt(2.0)) if self._symmetric else self._right
         self._blocks = []
-        total = np.zeros(len(rotations))
+        total = np.zeros(count)
         for start in range(0, alpha.count, step):
             stop = min(start + step, alpha.count)
             first = start if self._symmetric else 0
-            shape = (len(rotations), stop - start, beta.count - first)
-            vector, values = (workspace.array(f"{name} {start}", shape, kind) for name in ("vector", "values"))
-            np.matmul(scaled[:, start:stop], right[:, :, first:], out=vector)
-            np.matmul(row_values[:, start:stop], columns[:, :, first:], out=values)
-            block = _Block(start, stop, first, vector, values)
-            self._blocks.append(block)
+            if self._symmetric:
+                right[:, start:stop] = self._right[:, start:stop]
+            shape = (count, stop - start, beta.count - first)
+            vector = workspace.array(f"vector {start}", shape, kind)
+            values = workspace.array(f"values {start}", shape, kind)
+            np.matmul(scaled[:, start:stop], right[:, first:].swapaxes(1, 2), out=vector)
+            np.matmul(row_values[:, start:stop], column_values[:, :, first:], out=values)
+            self._blocks.append(_Block(start, stop, vector, values))
             product = np.multiply(values, vector, out=workspace.array("tilted", shape, kind))
-            total += self._weighted_dot(block, product, vector)
+            total += _inner(product, vector)
         self.mean = total + self._offset
-
-    def _weighted_dot(self, block: _Block, x: Array, y: Array) -> Array:
-        """Σ x y over the block and its mirror image."""
-        whole = np.vecdot(x.reshape(len(x), -1), y.reshape(len(y), -1)).astype(np.float64)
-        if not self._symmetric or block.diagonal == x.shape[2]:
-            return whole
-        d = block.diagonal
-        return 2.0 * whole - np.vecdot(x[:, :, :d], y[:, :, :d]).sum(axis=1)
 
     def about(self, center: Array) -> tuple[Array, Array, Array]:
         """See `Expectations.about`."""
         alpha, beta, symmetric = self._alpha, self._beta, self._symmetric
         count, n = len(center), alpha.orbitals
         kind = self._left.dtype
+        workspace = self._workspace
         shift = (center - self._offset).astype(kind)[:, None, None]
         rows = alpha.occupations.astype(kind)
-        columns = np.hstack([beta.occupations, np.ones((beta.count, 1))]).astype(kind)
-
+        columns = np.ones((beta.count, n + 1), dtype=kind)
+        columns[:, :n] = beta.occupations
         ones = np.ones(alpha.count, dtype=kind)
+
         second = np.zeros(count)
         cross = np.zeros((count, n, n))
         at_alpha, at_beta = np.zeros((count, alpha.count)), np.zeros((count, beta.count))
         tilted_alpha, tilted_beta = np.zeros_like(self._left), np.zeros_like(self._right)
+        # Off the diagonal one factor √2 of a symmetric vector is taken back: there g∘c is wanted once, not its square.
+        halved = self._left * kind.type(np.sqrt(0.5)) if symmetric else self._left
+        right = halved.copy() if symmetric else self._right
         for block in self._blocks:
-            here, d = slice(block.start, block.stop), block.diagonal
-            deviation, tilted, weighted = (
-                self._workspace.array(name, block.vector.shape, kind) for name in ("deviation", "tilted", "weighted")
-            )
-            np.subtract(block.values, shift, out=deviation)
-            np.multiply(deviation, block.vector, out=tilted)
-            second += self._weighted_dot(block, tilted, tilted)
-            np.multiply(tilted, block.vector, out=weighted)
+            here, shape = slice(block.start, block.stop), block.vector.shape
+            deviation = np.subtract(block.values, shift, out=workspace.array("deviation", shape, kind))
+            tilted = np.multiply(deviation, block.vector, out=workspace.array("tilted", shape, kind))
+            second += _inner(tilted, tilted)
+            weighted = np.multiply(tilted, block.vector, out=workspace.array("weighted", shape, kind))
             tilted *= deviation  # now g∘c
+            first = block.start if symmetric else 0
+            inside = weighted @ columns[first:]
+            cross += rows[here].T @ inside[:, :, :n]
+            at_alpha[:, here] = inside[:, :, n]
+            at_beta[:, first:] += ones[here] @ weighted
             if symmetric:
-                inside = weighted[:, :, :d] @ columns[here]
-                outside = weighted[:, :, d:] @ columns[block.stop :]
-                cross += rows[here].T @ (inside + 2.0 * outside)[:, :, :n]
-                at_alpha[:, here] += inside[:, :, n] + outside[:, :, n]
-                at_alpha[:, block.stop :] += ones[:d] @ weighted[:, :, d:]
-                tilted_alpha[:, here] += tilted @ self._left[:, block.start :]
-                tilted_alpha[:, block.stop :] += tilted[:, :, d:].swapaxes(1, 2) @ self._left[:, here]
+                right[:, here] = self._left[:, here]
+                stop = block.stop - block.start
+                tilted_alpha[:, block.stop :] += tilted[:, :, stop:].swapaxes(1, 2) @ halved[:, here]
             else:
-                inside = weighted @ columns
-                cross += rows[here].T @ inside[:, :, :n]
-                at_alpha[:, here] = inside[:, :, n]
-                at_beta += ones[:d] @ weighted
-                tilted_alpha[:, here] = tilted @ self._right
                 tilted_beta += tilted.swapaxes(1, 2) @ self._left[:, here]
+            tilted_alpha[:, here] += tilted @ right[:, first:]
 
         i, j = pair_indices(n)
         packed = np.where(i == j, 0.5, 1.0) * (cross[:, i, j] + cross[:, j, i])
-        single = at_alpha @ alpha.features
-        gradient = _antisymmetric_transition(self._left, tilted_alpha * self._scale, alpha, self._workspace)
+        single = at_alpha @ alpha.features + at_beta @ beta.features
+        gradient = _antisymmetric_transition(self._left, tilted_alpha * self._scale, alpha, workspace)
         if symmetric:
-            single, gradient = 2.0 * single, 2.0 * gradient
+            gradient *= 2.0
         else:
-            single = single + at_beta @ beta.features
-            gradient = gradient + _antisymmetric_transition(
-                self._right, tilted_beta * self._scale, beta, self._workspace
-            )
+            gradient += _antisymmetric_transition(self._right, tilted_beta * self._scale, beta, workspace)
         return second, np.concatenate([packed, single], axis=1), gradient
+
+
+def _inner(x: Array, y: Array) -> Array:
+    """Σ x y for each rotation, summed in the precision of the arrays."""
+    return np.vecdot(x.reshape(len(x), -1), y.reshape(len(y), -1)).astype(np.float64)
 
 
 def _table(kind: np.dtype, table: Array, second_last: Array | float, last: Array | float, count: int) -> Array:

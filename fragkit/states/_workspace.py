@@ -4,6 +4,7 @@ Evaluations allocate the same large temporaries again and again; handing the mem
 again costs more than the arithmetic on it.
 """
 
+import math
 import threading
 from typing import Any
 
@@ -21,7 +22,7 @@ class Workspace(threading.local):
 
     def array(self, name: str, shape: tuple[int, ...], kind: np.dtype) -> NDArray[Any]:
         """An uninitialised array of the given shape and type."""
-        size = int(np.prod(shape))
+        size = math.prod(shape)
         if size > _LARGEST:
             return np.empty(shape, kind)
         key = (name, kind)
