@@ -90,6 +90,16 @@ def test_counts_of_another_plan_are_refused(job: Path, capsys: pytest.CaptureFix
     assert "plan" in capsys.readouterr().err
 
 
+def test_compare_puts_the_optimised_plan_last_and_lowest(job: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["compare", str(job / "h4.fcidump"), "--state", "fci", "--noise", "0.01"]) == EXIT_OK
+    rows = [
+        line for line in capsys.readouterr().out.splitlines() if line.startswith(("Pauli", "low rank", "optimised"))
+    ]
+    costs = [float(row.rsplit(maxsplit=3)[1]) for row in rows]
+    assert len(costs) == 5
+    assert costs[-1] == min(costs)
+
+
 @pytest.mark.parametrize(
     ("arguments", "word"),
     [

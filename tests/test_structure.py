@@ -41,9 +41,10 @@ def test_lower_rooms_never_import_upper_ones(room: str) -> None:
     files = sorted((PACKAGE / room).glob("*.py"))
     assert files, f"room {room} has no files"
     for path in files:
+        tree = ast.parse(path.read_text())
         if f"{room}/{path.name}" in FORWARDING:
-            continue
-        wrong = imported_rooms(ast.parse(path.read_text())) - MAY_IMPORT[room] - {room}
+            tree = ast.Module([node for node in tree.body if isinstance(node, ast.Import | ast.ImportFrom)], [])
+        wrong = imported_rooms(tree) - MAY_IMPORT[room] - {room}
         assert not wrong, f"{room}/{path.name} imports {sorted(wrong)}"
 
 
