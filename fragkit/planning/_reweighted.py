@@ -14,11 +14,13 @@ from fragkit.planning._cost import check_state
 from fragkit.planning._exact import exact_coefficients
 from fragkit.planning._plan import Plan
 from fragkit.planning._robust import PLANNING_NOISE, robust_state, share_state
+from fragkit.planning._threads import sized_blas_threads
 from fragkit.states import ReferenceState
 
 Array = NDArray[np.float64]
 
 
+@sized_blas_threads
 def reweighted(
     plan: Plan,
     hamiltonian: Hamiltonian,

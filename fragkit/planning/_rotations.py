@@ -14,6 +14,7 @@ from fragkit.planning._lagrangian_covariances import Covariances
 from fragkit.planning._rotations_file import RotationsFile
 from fragkit.planning._rotations_run import Run
 from fragkit.planning._rotations_start import starting_rotations
+from fragkit.planning._threads import sized_blas_threads
 from fragkit.states import ReferenceState
 
 Array = NDArray[np.float64]
@@ -72,6 +73,7 @@ def least_count(orbitals: int) -> int:
     return -(-(orbitals + 1) * (orbitals + 2) // 4)
 
 
+@sized_blas_threads
 def optimise_rotations(
     hamiltonian: Hamiltonian,
     state: ReferenceState,

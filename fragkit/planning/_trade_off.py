@@ -15,6 +15,7 @@ from fragkit.planning._cost import check_state
 from fragkit.planning._plan import Plan
 from fragkit.planning._robust import PLANNING_NOISE, robust_state
 from fragkit.planning._rotations import least_count
+from fragkit.planning._threads import sized_blas_threads
 from fragkit.states import ReferenceState
 
 if TYPE_CHECKING:
@@ -97,6 +98,7 @@ class TradeOff:
         return f"TradeOff({len(self)} plans, circuits {self.circuits.tolist()})"
 
 
+@sized_blas_threads
 def trade_off(
     hamiltonian: Hamiltonian,
     state: ReferenceState,
