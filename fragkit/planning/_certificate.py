@@ -14,12 +14,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import Hamiltonian, InputError, MismatchError, as_count, as_positive
+from fragkit.planning._choose import distinct
 from fragkit.planning._cost import check_state, fragment_deviations
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._exact import exact_coefficients
 from fragkit.planning._plan import Plan, PlanBound
 from fragkit.planning._robust import PLANNING_NOISE, robust_state
 from fragkit.planning._rotations_start import random_rotations
+from fragkit.planning._threads import sized_blas_threads
 from fragkit.planning._whitened import NULL_VARIANCE
 from fragkit.states import ReferenceState
 
@@ -67,6 +69,7 @@ class OptimalityGap:
         return replace(plan, bound=PlanBound(own, self.lower_bound, note))
 
 
+@sized_blas_threads
 def optimality_gap(
     plan: Plan,
     hamiltonian: Hamiltonian,
@@ -159,7 +162,8 @@ def optimality_gap(
             done = bool(enlarged - bound <= tolerance * enlarged)
             if done or played == rounds:
                 break
-            fresh = _different(maxima, sizes)
+            fresh = maxima[np.argsort(-sizes)]
+            fresh = fresh[distinct(fresh, 0.01)]
             kept = found.shares > 1e-4
             rotations = np.concatenate([rotations[kept], fresh])
             covariances = [c for c, keep in zip(covariances, kept, strict=True) if keep]
@@ -197,6 +201,15 @@ class PhiSearch:
         self._state = state
         self._strict = np.triu_indices(hamiltonian.orbitals, 1)
 
+    @property
+    def rows(self) -> int:
+        """Number of operator rows."""
+        return self._map.space.size
+
+    def projected(self, rows: Array) -> Array:
+        """Operator rows without the shifts, as every dual has to be."""
+        return self._map.shifts.project(rows)
+
     def value_and_gradient(self, rotations: Array, dual: Array) -> tuple[Array, Array]:
         """φ (K,) and its gradient (K, n(n−1)/2) by X_pq, p < q, for U → U exp(X).
 
@@ -226,7 +239,7 @@ class PhiSearch:
             step = np.einsum("kab,kb->ka", inverse, slopes) * length[:, None]
             norm = np.linalg.norm(step, axis=1)
             step *= np.minimum(1.0, 0.6 / np.maximum(norm, 1e-300))[:, None]
-            tried = self._turned(rotations, step)
+            tried = self.turned(rotations, step)
             new_values, new_slopes = self.value_and_gradient(tried, dual)
             better = new_values > values
             difference = slopes - new_slopes
@@ -243,7 +256,7 @@ class PhiSearch:
                 break
         return rotations, values
 
-    def _turned(self, rotations: Array, steps: Array) -> Array:
+    def turned(self, rotations: Array, steps: Array) -> Array:
         """U exp(X) to second order, exactly orthogonal (Cayley)."""
         n = rotations.shape[-1]
         p, q = self._strict
@@ -275,13 +288,3 @@ def _starting_points(rotations: Array, starts: int, rng: np.random.Generator) ->
     noise = 0.3 * rng.standard_normal(near.shape)
     turned = np.linalg.qr(near + 0.5 * near @ (noise - noise.transpose(0, 2, 1)))[0] if len(near) else near
     return np.concatenate([random_rotations(starts - len(near), n, rng), turned])
-
-
-def _different(rotations: Array, sizes: Array) -> Array:
-    """Of rotations that differ only by order and signs of their columns, one, the largest φ first."""
-    kept: list[Array] = []
-    for k in np.argsort(-sizes):
-        overlaps = [np.max(np.abs(rotations[k].T @ other), axis=1) for other in kept]
-        if all(np.min(overlap) < 0.99 for overlap in overlaps):
-            kept.append(rotations[k])
-    return np.stack(kept) if kept else rotations[:0]

@@ -68,6 +68,9 @@ def weighted(
     prune: bool = True,
 ) -> tuple[Array, Weighting]:
     """Least-variance coefficients for some rotations, less the circuits that are hardly used when `prune`."""
+    if prune:
+        kept = distinct(rotations, 1e-6)
+        rotations, start = rotations[kept], None if start is None else start[kept]
     covariances = [planned_on.moments(rotation)[1] for rotation in rotations]
     found = exact_coefficients(hamiltonian, rotations, covariances, shifts=shifts, start=start, tolerance=tolerance)
     used = found.shares > UNUSED
@@ -87,6 +90,16 @@ def weighted(
     return rotations, found
 
 
+def distinct(rotations: Array, tolerance: float) -> NDArray[np.intp]:
+    """Positions of the first of each set of rotations that differ only by order and signs of their columns."""
+    kept: list[int] = []
+    for k, rotation in enumerate(rotations):
+        overlaps = (np.max(np.abs(rotation.T @ rotations[other]), axis=1) for other in kept)
+        if all(np.min(overlap) < 1.0 - tolerance for overlap in overlaps):
+            kept.append(k)
+    return np.array(kept, dtype=np.intp)
+
+
 def design_for(
     hamiltonian: Hamiltonian, planned_on: ReferenceState, count: int, settings: Settings, *, start: Any = None
 ) -> Design:
@@ -96,6 +109,8 @@ def design_for(
     they are then fitted to it (`Joint`), which leaves little freedom to lower the cost.
     """
     if count >= least_count(hamiltonian.orbitals):
+        if isinstance(start, np.ndarray):
+            start = start[distinct(start, 1e-3)]  # equal bases would leave too few different ones
         found = optimise_rotations(
             hamiltonian,
             planned_on,
