@@ -9,8 +9,9 @@ from numpy.typing import NDArray
 
 from fragkit.core import Fragmentation, Hamiltonian
 from fragkit.fit import Joint, fragment
+from fragkit.planning._counts import least_count
 from fragkit.planning._exact import Weighting, exact_coefficients
-from fragkit.planning._rotations import least_count, optimise_rotations
+from fragkit.planning._rotations import optimise_rotations
 from fragkit.states import ReferenceState
 
 Array = NDArray[np.float64]

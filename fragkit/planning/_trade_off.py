@@ -12,9 +12,9 @@ from fragkit.planning._assemble import plan_of_design
 from fragkit.planning._budget import Budget
 from fragkit.planning._choose import Design, Settings, design_for
 from fragkit.planning._cost import check_state
+from fragkit.planning._counts import least_count
 from fragkit.planning._plan import Plan
 from fragkit.planning._robust import PLANNING_NOISE, robust_state
-from fragkit.planning._rotations import least_count
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.states import ReferenceState
 

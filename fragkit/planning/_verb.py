@@ -21,9 +21,9 @@ from fragkit.planning._choose import (
     weighted,
 )
 from fragkit.planning._cost import check_state
+from fragkit.planning._counts import least_count
 from fragkit.planning._plan import Plan
 from fragkit.planning._robust import PLANNING_NOISE, robust_state, share_state
-from fragkit.planning._rotations import least_count
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.planning._trade_off import growing_counts, plan_seconds
 from fragkit.states import ReferenceState
