@@ -2,6 +2,8 @@
 
 from fragkit.pauli._costs import PauliCosts as PauliCosts
 from fragkit.pauli._costs import pauli_costs as pauli_costs
+from fragkit.pauli._diagonalise import GroupCircuit as GroupCircuit
+from fragkit.pauli._diagonalise import diagonalising_circuit as diagonalising_circuit
 from fragkit.pauli._groups import measurement_settings as measurement_settings
 from fragkit.pauli._groups import overlapping as overlapping
 from fragkit.pauli._groups import sorted_insertion as sorted_insertion

@@ -4,8 +4,10 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from fragkit.core import Hamiltonian, InputError, as_positive, frozen
+from fragkit.pauli._diagonalise import diagonalising_circuit
 from fragkit.pauli._groups import CONFLICTS, Indices, overlapping, sorted_insertion
 from fragkit.pauli._moments import group_covariances, group_variance
 from fragkit.pauli._split import least_cost_split
@@ -31,6 +33,8 @@ class PauliCosts:
         (Σ σ)² over groups in hartree²: shots × error² with Neyman's shares.
     deviations
         (groups,) standard deviation of each group in the state, hartree.
+    two_qubit_gates
+        (groups,) two-qubit gates before the readout of each circuit, any two qubits joined; zero for "qubit-wise".
     order
         Order of the spin-orbitals on the qubits.
     lower_bound
@@ -44,6 +48,7 @@ class PauliCosts:
     groups: int
     cost: float
     deviations: Array
+    two_qubit_gates: NDArray[np.int64]
     order: str
     lower_bound: float | None
     converged: bool
@@ -119,12 +124,17 @@ def _result(
     converged: bool,
     message: str,
 ) -> PauliCosts:
+    gates = np.zeros(len(groups), dtype=np.int64)
+    if grouping != "qubit-wise":
+        gates[:] = [diagonalising_circuit(terms, group).two_qubit_gates for group in groups]
+    gates.setflags(write=False)
     return PauliCosts(
         grouping=grouping,
         terms=len(terms) + 1,
         groups=len(groups),
         cost=float(np.sum(deviations)) ** 2,
         deviations=frozen(np.array(deviations)),
+        two_qubit_gates=gates,
         order=terms.order,
         lower_bound=lower_bound,
         converged=converged,
