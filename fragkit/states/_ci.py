@@ -76,8 +76,8 @@ class CIState(ReferenceState):
     def compressed(self, weight: float = 1e-10) -> "CIState":
         """The nearest state of lower rank (alpha strings × beta strings) that loses at most `weight` of the norm.
 
-        Evaluations for planning get faster in proportion to the rank. It is a slightly different state: variances
-        change by about the square root of `weight`, relatively. Plan with it, then judge the plan on the full state.
+        Evaluations for planning get faster in proportion to the rank. It is a slightly different state, whose amplitudes
+        are off by up to the square root of `weight`. Plan with it, then judge the plan on the full state.
 
         Raises
         ------
