@@ -112,9 +112,10 @@ class DesignMap:
         columns = self.space.pair_columns(rotations)
         return self.target - self.shifts.project(self.space.apply(columns, rotations, coefficients))
 
-    def operators(self, rotation: Array) -> Array:
-        """Matrix (rows, F') of one rotation: the operators of `features`, without the shifts."""
-        return self.shifts.project(self.space.dense(self.space.pair_columns(rotation), rotation) @ self.features)
+    def operators(self, rotation: Array, combinations: Array) -> Array:
+        """Matrix (rows, …) of one rotation: operators of `combinations` (F', …) of `features`, without the shifts."""
+        dense = self.space.dense(self.space.pair_columns(rotation), rotation)
+        return self.shifts.project(dense @ (self.features @ combinations))
 
     def turning(self, rotation: Array, coefficients: Array) -> Array:
         """Matrix (rows, n(n−1)/2): change of a fragment's operator with each generator p < q, without the shifts.

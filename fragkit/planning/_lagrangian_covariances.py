@@ -58,7 +58,7 @@ def tournament(players: int) -> list[tuple[NDArray[np.intp], NDArray[np.intp]]]:
     """Every pair i < j once, in rounds of disjoint pairs (the circle method).
 
     >>> [list(zip(i.tolist(), j.tolist())) for i, j in tournament(3)]
-    [[(1, 2)], [(0, 2)], [(0, 1)]]
+    [[(0, 1)], [(1, 2)], [(0, 2)]]
     """
     seats = players + players % 2
     rounds = []

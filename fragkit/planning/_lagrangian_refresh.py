@@ -7,21 +7,18 @@ a multiple of a projector, so that it adds no condition number of its own.
 """
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import solve_triangular
-from scipy.linalg.blas import dsymv, dsyrk, ssymv  # pyright: ignore[reportAttributeAccessIssue]
-from scipy.linalg.lapack import dpotrf, dpotri, dpotrs, dtrtrs  # pyright: ignore[reportAttributeAccessIssue]
 
 from fragkit.core import InputError
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian_covariances import Covariances, variance_curvature
+from fragkit.planning._lagrangian_factor import Factor, symmetric_product, working_precision
 
 Array = NDArray[np.float64]
-
-SINGLE_PRECISION_ROWS = 2000
-"""From this many rows on the metric is kept in single precision: it is only a metric, and reading it costs time."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -58,17 +55,15 @@ class Refresh:
     unscale: Array
     scaled: Array
     steps: Array
-    _inverse: NDArray[np.floating]
+    _inverse: NDArray[Any]
 
     def metric(self, rows: Array) -> Array:
         """M⁻¹ applied to rows without the shifts."""
-        if self._inverse.dtype == np.float32:
-            return ssymv(1.0, self._inverse, rows.astype(np.float32), lower=1).astype(np.float64)
-        return dsymv(1.0, self._inverse, rows, lower=1)
+        return symmetric_product(self._inverse, rows)
 
 
 def refresh(
-    design: DesignMap, covariances: Covariances, rotations: Array, weights: Array, *, iterations: int
+    design: DesignMap, covariances: Covariances, rotations: Array, weights: Array, *, iterations: int = 1
 ) -> Refresh:
     """Solve for exact coefficients with the given weights, improving the weights `iterations` − 1 times.
 
@@ -78,51 +73,78 @@ def refresh(
         If these rotations cannot reproduce the Hamiltonian.
     """
     count, size, reduced = len(rotations), design.space.size, design.features.shape[1]
-    blocks = np.empty((size, count * reduced), order="F")
+    kind = working_precision(size)
+    blocks = np.empty((size, count * reduced), dtype=kind, order="F")
     halves = np.empty((count, reduced, reduced))
     for m, rotation in enumerate(rotations):
-        lower = np.linalg.cholesky(design.features.T @ covariances.matrix(rotation) @ design.features)
-        halves[m] = solve_triangular(lower, np.eye(reduced), lower=True, check_finite=False)
-        blocks[:, m * reduced : (m + 1) * reduced] = design.operators(rotation) @ halves[m].T
-    scaled = np.empty_like(blocks)
+        halves[m] = inverse_root(design, covariances, rotation)
+        blocks[:, m * reduced : (m + 1) * reduced] = design.operators(rotation, halves[m].T)
+    used = np.ones(count)
     for _ in range(iterations):
-        used = np.maximum(weights, 1e-2 / count)
-        used = used / used.sum()
-        np.multiply(blocks, np.repeat(np.sqrt(used), reduced), out=scaled)
-        matrix = dsyrk(1.0, scaled, lower=1)
-        # M is completed on the shifts, which it does not see, so that it can be inverted.
-        matrix = dsyrk(np.trace(matrix) / size, design.shifts.basis, beta=1.0, c=matrix, lower=1, overwrite_c=1)
-        factor, failed = dpotrf(matrix, lower=1, overwrite_a=1, clean=0)
-        if failed or np.min(np.diag(factor)) < 1e-7 * np.max(np.diag(factor)):
+        wanted = np.maximum(weights, 1e-2 / count)
+        wanted = wanted / wanted.sum()
+        blocks *= np.repeat(np.sqrt(wanted / used), reduced).astype(kind)
+        used = wanted
+        information = Factor(blocks, design.shifts.basis)
+        if information.singular:
             raise InputError(
                 f"`count` must be large enough for {design.orbitals} orbitals (got {count}): generic rotations "
                 "reproduce the Hamiltonian only from about (n+1)(n+2)/4 on"
             )
-        dual = design.shifts.project(dpotrs(factor, design.target, lower=1)[0])
-        response = (scaled.T @ dual).reshape(count, reduced)
+        dual = design.shifts.project(information.solve(design.target))
+        response = (blocks.T @ dual.astype(kind)).astype(np.float64).reshape(count, reduced)
         deviations = np.sqrt(used) * np.linalg.norm(response, axis=1)
-        total = float(deviations.sum())
-        weights = deviations / total
-    roots = np.sqrt(used)[:, None, None]
-    scale = roots * (design.features @ halves.transpose(0, 2, 1))
-    coefficients = np.einsum("kfr,kr->kf", scale, response)
-    left = design.residual(rotations, coefficients)
+        weights = deviations / deviations.sum()
+    scale = np.sqrt(used)[:, None, None] * (design.features @ halves.transpose(0, 2, 1))
+    coefficients, left = _refined(design, rotations, scale, response, blocks, information)
+    unscale = np.linalg.pinv(scale)
+    scaled = np.einsum("krf,kf->kr", unscale, coefficients)
+    deviations = np.sqrt(used) * np.linalg.norm(scaled, axis=1)
+    total = float(deviations.sum())
+    weights = deviations / total
+
     curvature = variance_curvature(covariances, rotations, coefficients) / weights[:, None]
     for m, rotation in enumerate(rotations):
-        moved, _ = dtrtrs(factor, design.turning(rotation, coefficients[m]), lower=1)
+        moved = information.half_solve(design.turning(rotation, coefficients[m]))
         curvature[m] += 2.0 * np.einsum("rp,rp->p", moved, moved)
     curvature += 2.0 * np.maximum(weights, 1e-2 / count)[:, None] * total**2
-    inverse, _ = dpotri(factor, lower=1, overwrite_c=1)
     return Refresh(
         rotations=rotations,
         coefficients=coefficients,
         shares=weights,
         cost=total**2,
-        infeasibility=float(np.linalg.norm(left) / np.linalg.norm(design.target)),
-        dual=np.asarray(2.0 * dual),
+        infeasibility=left,
+        dual=2.0 * dual,
         scale=scale,
-        unscale=np.linalg.pinv(scale),
-        scaled=response,
+        unscale=unscale,
+        scaled=scaled,
         steps=1.0 / np.sqrt(curvature),
-        _inverse=inverse.astype(np.float32) if size >= SINGLE_PRECISION_ROWS else inverse,
+        _inverse=information.into_inverse(),
     )
+
+
+def inverse_root(design: DesignMap, covariances: Covariances, rotation: Array) -> Array:
+    """(F', F') L⁻¹ with C = L Lᵀ the covariance of `design.features` in one rotated basis."""
+    lower = np.linalg.cholesky(design.features.T @ covariances.matrix(rotation) @ design.features)
+    return solve_triangular(lower, np.eye(len(lower)), lower=True, check_finite=False)
+
+
+def _refined(
+    design: DesignMap, rotations: Array, scale: Array, response: Array, blocks: NDArray[Any], information: "Factor"
+) -> tuple[Array, float]:
+    """Coefficients corrected until what is left of the Hamiltonian is rounding noise; and its relative norm."""
+    coefficients = np.einsum("kfr,kr->kf", scale, response)
+    norm = float(np.linalg.norm(design.target))
+    residual = design.residual(rotations, coefficients)
+    left = float(np.linalg.norm(residual)) / norm
+    for _ in range(5):
+        if left < 1e-13:
+            break
+        step = (blocks.T @ information.solve(residual).astype(blocks.dtype)).astype(np.float64)
+        better = coefficients + np.einsum("kfr,kr->kf", scale, step.reshape(response.shape))
+        residual = design.residual(rotations, better)
+        now = float(np.linalg.norm(residual)) / norm
+        if now > 0.5 * left:
+            break
+        coefficients, left = better, now
+    return coefficients, left

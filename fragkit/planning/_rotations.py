@@ -13,6 +13,7 @@ from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian_covariances import Covariances
 from fragkit.planning._rotations_file import RotationsFile
 from fragkit.planning._rotations_run import Run
+from fragkit.planning._rotations_run import least_count as least_count
 from fragkit.planning._rotations_start import starting_rotations
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.states import ReferenceState
@@ -60,17 +61,6 @@ class RotationDesign:
     seconds: float
     converged: bool
     message: str
-
-
-def least_count(orbitals: int) -> int:
-    """Fewest generic rotations that reproduce every Hamiltonian of n orbitals, ⌈(n+1)(n+2)/4⌉.
-
-    Modulo operators that are constant in the sector each brings n(n−1)/2 new opposite-spin rows.
-
-    >>> [least_count(n) for n in (2, 6, 7, 8, 10, 12)]
-    [3, 14, 18, 23, 33, 46]
-    """
-    return -(-(orbitals + 1) * (orbitals + 2) // 4)
 
 
 @sized_blas_threads

@@ -1,14 +1,17 @@
 """One descent of the Lagrangian: stretches of quasi-Newton steps between exact refreshes."""
 
 from collections.abc import Callable
+from functools import cache
 
 import numpy as np
 from numpy.typing import NDArray
+from threadpoolctl import ThreadpoolController
 
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian import Lagrangian, Point
 from fragkit.planning._lagrangian_covariances import Covariances
 from fragkit.planning._lagrangian_refresh import Refresh, refresh
+from fragkit.planning._lagrangian_restore import first_coefficients, restore
 from fragkit.planning._rotations_memory import Memory
 
 Array = NDArray[np.float64]
@@ -16,8 +19,9 @@ Array = NDArray[np.float64]
 MEMORY = 100
 LARGEST_TURN = 0.5  # radian, of one step between two orbitals
 MULTIPLIER_INTERVAL = 15  # steps between updates of the multipliers
-FIRST_PENALTY = 2.5  # κ; the multipliers converge for κ above about 1/2, the steps are longer for small κ
+FIRST_PENALTY = 1.5  # κ; the multipliers converge for κ above about 1/2, the steps are longer for small κ
 LARGEST_PENALTY = 50.0
+FEASIBLE = 1e-9  # relative residual of a refresh that counts as exact
 SMALL = 1200  # rows up to which a refresh is cheap beside the steps between two of them
 
 
@@ -31,7 +35,13 @@ class Run:
         self._covariances = covariances
         count, n = len(rotations), design.orbitals
         weights = np.full(count, 1.0 / count) if shares is None else shares
-        self.current = self.best = refresh(design, covariances, rotations, weights, iterations=4)
+        # Too few circuits for generic rotations: rotations then have to give way to reach exactness.
+        self._joint = count < least_count(n)
+        if self._joint:
+            first = restore(design, covariances, rotations, first_coefficients(design, rotations))
+        else:
+            first = refresh(design, covariances, rotations, weights, iterations=4)
+        self.current = self.best = first
         self._memory = Memory(MEMORY, count * (n * (n - 1) // 2 + design.features.shape[1]))
         self._penalty = FIRST_PENALTY
         self.evaluations = 0
@@ -41,8 +51,10 @@ class Run:
     @property
     def natural_steps(self) -> int:
         """Steps until the next refresh: few while the scaling changes fast, more where a refresh is dear."""
-        longest = 60 if self._design.space.size < SMALL else 120
-        return min(longest, 20 + 10 * (len(self.history) - 1))
+        longest = 80 if self._design.space.size < SMALL else 120
+        if len(self.history) > 1 and self.history[-1][1] > 0.98 * self.history[-2][1]:
+            longest *= 2
+        return min(longest, 20 + 15 * (len(self.history) - 1))
 
     def recent_fall(self, window: int) -> float | None:
         """Relative fall of the best cost over the last `window` evaluations, or None while there were fewer."""
@@ -52,14 +64,19 @@ class Run:
     def cycle(self, steps: int, report: Callable[[int, float], None]) -> None:
         """Take up to `steps` steps, then refresh. `report` gets new evaluations and the cost of the last refresh."""
         lagrangian = Lagrangian(self._design, self._covariances, self.current, self._penalty)
-        end = self._descend(lagrangian, steps, report)
+        # Products are small between refreshes: threads of the linear algebra would only get in the way.
+        with _linear_algebra().limit(limits=1, user_api="blas"):
+            end = self._descend(lagrangian, steps, report)
         rotations = _orthonormal(end.rotations)
-        deviations = np.sqrt(np.maximum(end.moments[0], 0.0))
-        iterations = 2 if self._design.space.size < SMALL else 1
-        weights = deviations / deviations.sum()
-        new = refresh(self._design, self._covariances, rotations, weights, iterations=iterations)
+        if self._joint:
+            coefficients = np.einsum("kfr,kr->kf", self.current.scale, end.scaled)
+            new = restore(self._design, self._covariances, rotations, coefficients)
+        else:
+            deviations = np.sqrt(np.maximum(end.moments[0], 0.0))
+            new = refresh(self._design, self._covariances, rotations, deviations / deviations.sum())
         self.history.append((self.evaluations, new.cost))
-        if new.cost > 1.02 * self.best.cost:
+        worse = new.cost > 1.02 * self.best.cost or new.infeasibility > FEASIBLE
+        if worse and self.best.infeasibility <= FEASIBLE:
             # Too soft a penalty lets rotations run ahead of feasibility.
             self.stuck = self._penalty >= LARGEST_PENALTY
             self._penalty = min(2.0 * self._penalty, LARGEST_PENALTY)
@@ -68,7 +85,7 @@ class Run:
             return
         self._carry_over(self.current, new)
         self.current = new
-        if new.cost < self.best.cost:
+        if self.best.infeasibility > FEASIBLE or new.cost < self.best.cost:
             self.best = new
 
     def _descend(self, lagrangian: Lagrangian, steps: int, report: Callable[[int, float], None]) -> Point:
@@ -123,6 +140,22 @@ class Run:
             lambda rows: mapped(rows, ratio, forward.transpose(0, 2, 1)),
             lambda rows: mapped(rows, 1.0 / ratio, backward.transpose(0, 2, 1)),
         )
+
+
+def least_count(orbitals: int) -> int:
+    """Fewest generic rotations that reproduce every Hamiltonian of n orbitals, ⌈(n+1)(n+2)/4⌉.
+
+    Modulo operators that are constant in the sector each brings n(n−1)/2 new opposite-spin rows.
+
+    >>> [least_count(n) for n in (2, 6, 7, 8, 10, 12)]
+    [3, 14, 18, 23, 33, 46]
+    """
+    return -(-(orbitals + 1) * (orbitals + 2) // 4)
+
+
+@cache
+def _linear_algebra() -> ThreadpoolController:
+    return ThreadpoolController()
 
 
 def _orthonormal(rotations: Array) -> Array:
