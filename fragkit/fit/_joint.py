@@ -16,7 +16,7 @@ from fragkit.fit._levenberg import Outcome, levenberg_marquardt, matrix_free_sol
 from fragkit.fit._pairs import pair_matrix
 from fragkit.fit._penalty import Penalty
 from fragkit.fit._point import Point, point_at
-from fragkit.fit._starts import TURNS, given_start, grown, low_rank_start, pruned, turned
+from fragkit.fit._starts import LARGEST_TURN_OF_LARGE, TURNS, given_start, grown, low_rank_start, pruned, turned
 
 Array = NDArray[np.float64]
 Start = Literal["low rank", "greedy"]
@@ -179,11 +179,13 @@ class _Run:
 
     def _start(self, count: int, number: int, warm: Point | None) -> Point:
         rng, strategy = self.controls.rng, self.strategy
-        amount = TURNS[number % len(TURNS)]
         if warm is not None:
             if number == 0:
                 return grown(self.target, pruned(self.target, warm, count), count, rng)
-            number, amount = number - 1, TURNS[(number - 1) % len(TURNS)]
+            number -= 1
+        amount = TURNS[number % len(TURNS)]
+        if self._method_for(count) == "matrix-free":
+            amount = min(amount, LARGEST_TURN_OF_LARGE)
         if isinstance(strategy.start, Fragmentation):
             rotations, coefficients = given_start(strategy.start.fragments, self.hamiltonian.orbitals)
             point = point_at(self.target, rotations, coefficients)
@@ -199,6 +201,11 @@ class _Run:
             return point
         return point_at(self.target, turned(point.rotations, amount, rng), point.coefficients)
 
+    def _method_for(self, count: int) -> Literal["dense", "matrix-free"]:
+        if self.strategy.method != "auto":
+            return self.strategy.method
+        return "dense" if dense_size(count, self.hamiltonian.orbitals) <= DENSE_LIMIT else "matrix-free"
+
     def _minimise(self, begin: Point, best: Point | None) -> Point:
         if not self.penalty:
             return self._iterate(begin, best, Penalty()).point
@@ -208,10 +215,7 @@ class _Run:
         return self._iterate(point, best, Penalty(), damping=1e-6).point
 
     def _iterate(self, begin: Point, best: Point | None, penalty: Penalty, damping: float = 1e-2) -> Outcome:
-        count, n, _ = begin.rotations.shape
-        method = self.strategy.method
-        if method == "auto":
-            method = "dense" if dense_size(count, n) <= DENSE_LIMIT else "matrix-free"
+        method = self._method_for(len(begin.rotations))
         self.method = _METHOD_NAMES[method]
         done = self.iterations
 
@@ -219,16 +223,24 @@ class _Run:
             if best is None or point.squared < best.squared:
                 self.controls.update(point.rotations, point.coefficients, point.norm, done + iteration)
 
+        def out_of_time() -> bool:
+            return self.out_of_time
+
+        solver_at = (
+            dense_solver
+            if method == "dense"
+            else matrix_free_solver(max_steps=30, accuracy=0.1, out_of_time=out_of_time)
+        )
         outcome = levenberg_marquardt(
             self.target,
             begin,
-            dense_solver if method == "dense" else matrix_free_solver(max_steps=30, accuracy=0.1),
+            solver_at,
             tol=self.tol,
             max_iterations=self.strategy.max_iterations,
             penalty=penalty,
             damping=damping,
             update=update,
-            out_of_time=lambda: self.out_of_time,
+            out_of_time=out_of_time,
         )
         self.iterations += outcome.iterations
         self.last_reason = outcome.reason

@@ -47,7 +47,7 @@ def levenberg_marquardt(
     damping: float = 1e-2,
     patience: int = 40,
     update: Callable[[Point, int], None] | None = None,
-    out_of_time: Callable[[], bool] | None = None,
+    out_of_time: Callable[[], bool] = lambda: False,
 ) -> Outcome:
     """Minimise ‖target − Σ F‖² + penalty from `start`.
 
@@ -61,7 +61,7 @@ def levenberg_marquardt(
     for iteration in range(max_iterations):
         if point.norm <= tol and not penalty:
             return Outcome(point, iteration, "tolerance")
-        if out_of_time is not None and out_of_time():
+        if out_of_time():
             return Outcome(point, iteration, "seconds")
         if _stalled(history, patience, bool(penalty)):
             return Outcome(point, iteration, "stalled")
@@ -126,8 +126,12 @@ def _stalled(history: list[float], patience: int, penalised: bool) -> bool:
     return now > (1.0 - 1e-6 if penalised else 0.81) * before
 
 
-def matrix_free_solver(*, max_steps: int, accuracy: float) -> Callable[[Point, Array], LinearSolver]:
+def matrix_free_solver(
+    *, max_steps: int, accuracy: float, out_of_time: Callable[[], bool]
+) -> Callable[[Point, Array], LinearSolver]:
     """Preconditioned conjugate gradients on the normal equations, at most `max_steps` products for one solve.
+
+    A solve that is cut short, also by the time, still gives a step that lowers the model.
 
     Within one fragment JᵀJ is diagonal in its own orbitals, 1 for λ_ij and 4 Σ_k (λ_ak − λ_bk)² for X_ab, since
     occupation pairs and mixed pairs are orthogonal; that diagonal is the preconditioner.
@@ -147,7 +151,9 @@ def matrix_free_solver(*, max_steps: int, accuracy: float) -> Callable[[Point, A
                 a, b = adjoint(point, derivative(point, v))
                 return a + damping * v[0], b + (damping + weights) * v[1]
 
-            return _conjugate_gradients(apply, (turn, change), scale, max_steps=max_steps, accuracy=accuracy)
+            return _conjugate_gradients(
+                apply, (turn, change), scale, max_steps=max_steps, accuracy=accuracy, out_of_time=out_of_time
+            )
 
         return solve
 
@@ -155,14 +161,20 @@ def matrix_free_solver(*, max_steps: int, accuracy: float) -> Callable[[Point, A
 
 
 def _conjugate_gradients(
-    apply: Callable[[Tangent], Tangent], right: Tangent, scale: Tangent, *, max_steps: int, accuracy: float
+    apply: Callable[[Tangent], Tangent],
+    right: Tangent,
+    scale: Tangent,
+    *,
+    max_steps: int,
+    accuracy: float,
+    out_of_time: Callable[[], bool],
 ) -> Tangent:
     solution = (np.zeros_like(right[0]), np.zeros_like(right[1]))
     left = right
     direction = scaled = (left[0] / scale[0], left[1] / scale[1])
     size = first = inner(left, scaled)
     for _ in range(max_steps):
-        if size <= accuracy**2 * first or size == 0.0:
+        if size <= accuracy**2 * first or size == 0.0 or out_of_time():
             break
         image = apply(direction)
         length = size / inner(direction, image)

@@ -13,8 +13,10 @@ from fragkit.fit._point import Point, adjoint, derivative, point_at
 
 Array = NDArray[np.float64]
 
-# A small turn keeps the low-rank start's fast descent; a large one leaves its symmetry and other valleys.
-TURNS = (0.2, 0.05, 0.1, 0.05, 0.5, 0.05, 0.02)
+# Radian, one start after the other. A large turn leaves the symmetry and the valley of the low-rank start; a small one
+# keeps its head start, which is worth most at the counting bound and for large molecules.
+TURNS = (0.1, 0.02, 0.05, 0.2, 0.01, 0.5, 0.05)
+LARGEST_TURN_OF_LARGE = 0.05
 
 
 def low_rank_start(hamiltonian: Hamiltonian, count: int) -> tuple[Array, Array]:
