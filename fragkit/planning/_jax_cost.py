@@ -11,8 +11,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import Hamiltonian, InputError, as_positive, as_real_array, evaluate_features, pair_indices
+from fragkit.planning._design_map import DesignMap
 from fragkit.planning._operators import OperatorSpace
-from fragkit.planning._shifts import sector_shifts
 from fragkit.states import MaximallyMixedState
 
 Array = NDArray[np.float64]
@@ -107,22 +107,18 @@ def differentiable_cost(hamiltonian: Hamiltonian, vector: Any, *, noise: float =
     weight = as_positive(noise, "noise")
     if weight > 1.0:
         raise InputError(f"`noise` must be at most 1 (got {weight})")
-    space = OperatorSpace(n)
-    shifts = sector_shifts(space, electrons)
-    mean, covariance = MaximallyMixedState(n, electrons).moments(np.eye(n))
-    values, vectors = np.linalg.eigh(covariance)
-    # What is constant in the sector measures nothing; in the rest the noise makes every covariance regular.
-    basis = vectors[:, values > 1e-10 * values[-1]]
+    # Features that are constant in the sector measure nothing; the others have regular covariances under noise.
+    design = DesignMap(hamiltonian)
     return DifferentiableCost(
         orbitals=n,
         electrons=electrons,
         noise=weight,
         vector=given,
-        target=shifts.project(space.hamiltonian_rows(hamiltonian)),
-        shifts=shifts.basis,
-        basis=basis,
-        mixed_mean=mean,
-        mixed_covariance=covariance,
+        target=design.target,
+        shifts=design.shifts.basis,
+        basis=design.features,
+        mixed_mean=MaximallyMixedState(n, electrons).moments(np.eye(n))[0],
+        mixed_covariance=design.mixed,
     )
 
 
