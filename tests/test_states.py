@@ -22,7 +22,7 @@ from states_helpers import (
 
 import fragkit
 from fragkit.core import InputError, MismatchError, pair_indices
-from fragkit.states import CIState, DeterminantState, GaussianState, ReferenceState, reference_state
+from fragkit.states import CIState, DeterminantState, GaussianState, ReferenceState, mixture, reference_state
 
 
 def random_state(orbitals: int, electrons: tuple[int, int], seed: int) -> CIState:
@@ -348,6 +348,9 @@ def test_digests_tell_states_apart():
         (lambda h: reference_state(h, "hf", noise="much"), "`noise` must be a number from 0 to 1"),
         (lambda h: reference_state(h, "hf", noise=float("nan")), "`noise` must be from 0 to 1"),
         (lambda h: reference_state(h, "fci", memory=1e4), "225 determinants"),
+        (lambda h: reference_state(h, "fci", memory="all"), "`memory` must be a number above zero"),
+        (lambda h: ReferenceState.from_ci_vector("h2", np.eye(3)), "`hamiltonian` must be a Hamiltonian"),
+        (lambda h: mixture([3]), "`parts` must be a list of pairs"),
         (lambda h: ReferenceState.from_ci_vector(h, np.eye(3)), "`vector` must have shape"),
         (lambda h: ReferenceState.from_ci_vector(h, np.full((15, 15), np.nan)), "`vector` must be finite"),
         (lambda h: ReferenceState.from_ci_vector(h, np.eye(15)), "`vector` must be normalised"),

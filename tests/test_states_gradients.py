@@ -1,5 +1,7 @@
 """Variances of many fragments and their derivatives, against covariance matrices and finite differences."""
 
+import pickle
+
 import numpy as np
 import pytest
 from molecules import molecule_hamiltonian
@@ -172,3 +174,12 @@ def test_compressed_state_loses_no_more_than_asked_and_keeps_its_moments():
     np.testing.assert_allclose(small.moments(u)[0], state.moments(u)[0], atol=5e-3)
     np.testing.assert_allclose(state.compressed(0.0).vector, state.vector, atol=1e-12)
     assert len(state.compressed(1.0)._factored.scale) == 1
+
+
+def test_states_can_be_sent_to_other_processes():
+    state = make_state("mixture", 4, (2, 1))
+    rotations, coefficients = np.array([random_rotation(4, np.random.default_rng(10))]), np.ones((1, 20))
+    here = state.variance_and_gradient(rotations, coefficients)
+    there = pickle.loads(pickle.dumps(state)).variance_and_gradient(rotations, coefficients)
+    for one, other in zip(here, there, strict=True):
+        np.testing.assert_array_equal(one, other)

@@ -51,6 +51,8 @@ class CIState(ReferenceState):
         cls, hamiltonian: Hamiltonian, vector: Any, *, description: str = "given CI vector"
     ) -> "CIState":
         """The state with the given coefficients, normalised to 1e-6; see `ReferenceState.from_ci_vector`."""
+        if not isinstance(hamiltonian, Hamiltonian):
+            raise InputError(f"`hamiltonian` must be a Hamiltonian (got {type(hamiltonian).__name__})")
         n, (a, b) = hamiltonian.orbitals, hamiltonian.electrons
         shape = (strings(n, a).count, strings(n, b).count)
         got = np.shape(vector)
@@ -76,8 +78,8 @@ class CIState(ReferenceState):
     def compressed(self, weight: float = 1e-10) -> "CIState":
         """The nearest state of lower rank (alpha strings × beta strings) that loses at most `weight` of the norm.
 
-        Evaluations for planning get faster in proportion to the rank. It is a slightly different state, whose amplitudes
-        are off by up to the square root of `weight`. Plan with it, then judge the plan on the full state.
+        Evaluations for planning get faster in proportion to the rank. It is a slightly different state, whose
+        amplitudes are off by up to the square root of `weight`. Plan with it, then judge the plan on the full state.
 
         Raises
         ------

@@ -29,7 +29,10 @@ def mixture(parts: Iterable[tuple[float, ReferenceState]]) -> ReferenceState:
     >>> mixture([(1.0, MaximallyMixedState(2, (1, 1)))])
     MaximallyMixedState(maximally mixed, orbitals=2, electrons=(1, 1))
     """
-    listed = [(as_weight(weight, "weight"), state) for weight, state in parts]
+    try:
+        listed = [(as_weight(weight, "weight"), state) for weight, state in parts]
+    except TypeError as error:
+        raise InputError(f"`parts` must be a list of pairs (weight, state) (got {parts!r})") from error
     total = sum(weight for weight, _ in listed)
     if not listed or abs(total - 1.0) > 1e-9:
         raise InputError(f"`parts` must have weights that add up to 1 (got {total:.10g}); rescale them")

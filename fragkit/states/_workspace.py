@@ -20,6 +20,10 @@ class Workspace(threading.local):
     def __init__(self) -> None:
         self._arrays: dict[tuple[str, np.dtype], NDArray[Any]] = {}
 
+    def __reduce__(self) -> tuple[type, tuple[()]]:
+        # A copy, or a state sent to another process, starts with scratch arrays of its own.
+        return Workspace, ()
+
     def array(self, name: str, shape: tuple[int, ...], kind: np.dtype) -> NDArray[Any]:
         """An uninitialised array of the given shape and type."""
         size = math.prod(shape)
