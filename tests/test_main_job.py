@@ -36,7 +36,8 @@ def test_fragments_sum_to_full_ci_and_low_rank_costs_are_reproduced(name: str) -
     assert energy == pytest.approx(FULL_CI[name], abs=1e-6)
     plan = fragkit.plan(hamiltonian, state, fragments=fragments, reweight=False)
     assert plan.cost == pytest.approx(cost, rel=0.01)
-    assert plan_cost(plan, state) == pytest.approx(plan.cost, rel=1e-3)
+    # Shots are whole numbers, at least ten each, and shared for a state with a trace of noise.
+    assert plan_cost(plan, state) == pytest.approx(plan.cost, rel=5e-3)
 
 
 def test_water_with_a_hundred_thousand_shots() -> None:
