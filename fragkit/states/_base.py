@@ -134,7 +134,7 @@ class ReferenceState(ABC):
         precision
             "double", or "single" to evaluate CI vectors in half the time with about six digits.
         threads
-            Threads over the rotations of large states; by default OMP_NUM_THREADS or the number of cores.
+            Threads over the rotations; by default OMP_NUM_THREADS or the number of cores for large states, else 1.
 
         Returns
         -------
@@ -172,7 +172,11 @@ class ReferenceState(ABC):
 
         step = self._batch()
         parts = [slice(start, start + step) for start in range(0, len(turns), step)]
-        workers = available_threads() if threads is None else as_count(threads, "threads", minimum=1)
+        if threads is not None:
+            workers = as_count(threads, "threads", minimum=1)
+        else:
+            # Pieces of several small rotations are too short to share between threads.
+            workers = available_threads() if step == 1 else 1
         in_parallel(evaluate, parts, workers)
         return variances, products, gradient
 
