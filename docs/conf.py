@@ -14,3 +14,13 @@ autodoc_typehints = "description"
 html_theme = "furo"
 html_title = "fragkit"
 exclude_patterns = ["_build"]
+
+
+def escape_bars(app, what, name, obj, options, lines):
+    """Bars in docstrings are absolute values and kets, never reStructuredText substitutions."""
+    lines[:] = [line if line.lstrip().startswith((">>>", "...")) else line.replace("|", r"\|") for line in lines]
+
+
+def setup(app):
+    """Hook for docstrings, after napoleon has read their sections."""
+    app.connect("autodoc-process-docstring", escape_bars, priority=900)
