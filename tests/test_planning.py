@@ -105,7 +105,7 @@ def test_quantum_limit_is_below_every_cost() -> None:
 def test_plan_for_a_noisy_state_is_near_the_quantum_limit() -> None:
     hamiltonian = molecule_hamiltonian("LiH")
     noisy = state_of("LiH").with_noise(0.01)
-    made = plan(hamiltonian, noisy)
+    made = plan(hamiltonian, noisy, circuits=18)
     true = state_of("LiH", "fci").with_noise(0.01)
     assert plan_cost(made, true) < 1.10 * true.variance(hamiltonian)
 
