@@ -37,6 +37,7 @@ if TYPE_CHECKING:
     from fragkit.readers import hubbard as hubbard
     from fragkit.readers import to_fcidump as to_fcidump
     from fragkit.states import ReferenceState as ReferenceState
+    from fragkit.states import mixture as mixture
     from fragkit.states import reference_state as reference_state
 
 __version__ = "0.1.0"
@@ -59,7 +60,7 @@ _ROOMS = {
     "fragkit.fit": ("Greedy", "Joint", "LowRank", "fragment"),
     "fragkit.planning": ("Plan", "plan"),
     "fragkit.readers": ("from_fcidump", "from_openfermion", "from_pyscf", "hubbard", "to_fcidump"),
-    "fragkit.states": ("ReferenceState", "reference_state"),
+    "fragkit.states": ("ReferenceState", "mixture", "reference_state"),
 }
 _HOME = {name: room for room, names in _ROOMS.items() for name in names}
 
