@@ -84,7 +84,7 @@ def newton_weights(
             weights = weights * np.maximum(np.sqrt(sizes), 1e-2)
             continue
         if slack is None:
-            slack = np.maximum(1.0 - sizes[active], 0.1)
+            slack = np.maximum(1.0 - sizes[active], 0.1 if polish else 0.01)
         blocks = [block for block, keep in zip(design.blocks, active, strict=True) if keep]
         stepped, slack = _step(design, blocks, information, scale, weights[active], slack, sizes[active], response)
         weights = np.zeros(count)
