@@ -23,7 +23,7 @@ MAY_IMPORT = {
     "files": {"core", "readers", "fit", "states", "circuits", "pauli", "planning", "estimate"},
 }
 # Methods of Plan, Counts and Estimate forward to upper rooms, and import them in the method's body.
-FORWARDING = {"planning/_plan.py", "estimate/_counts.py", "estimate/_estimate.py"}
+FORWARDING = {"planning/_plan.py", "estimate/_adaptive.py", "estimate/_counts.py", "estimate/_estimate.py"}
 
 
 def imported_rooms(tree: ast.AST) -> set[str]:

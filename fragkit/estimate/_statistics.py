@@ -33,6 +33,10 @@ class Sample:
         variance = second * shots / (shots - 1) if shots > 1 else 0.0
         return cls(mean, variance, float(weights @ squares**2), shots)
 
+    def scaled(self, factor: float) -> "Sample":
+        """Moments of the values times `factor`."""
+        return Sample(self.mean * factor, self.variance * factor**2, self.fourth * factor**4, self.shots)
+
     @property
     def error_of_variance(self) -> float:
         """Standard error of `variance`, from the fourth moment."""

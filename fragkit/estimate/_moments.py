@@ -1,0 +1,103 @@
+"""What counts say about the state: density matrix, and covariances of the features that a plan can be chosen with."""
+
+import numpy as np
+from numpy.typing import NDArray
+
+from fragkit.core import evaluate_features, pair_indices
+from fragkit.estimate._counts import Counts
+from fragkit.estimate._sector import in_sector
+from fragkit.planning import Plan
+from fragkit.states import GaussianState, ReferenceState
+
+Array = NDArray[np.float64]
+
+MODEL_SHOTS = 1000.0
+"""Weight of the model in the covariances, in shots: outcomes rarer than one in so many are the model's business."""
+
+MODEL_NOISE = 2e-3
+"""Depolarisation mixed into the model, which bounds the coefficients."""
+
+
+def selected(counts: Counts, electrons: tuple[int, int]) -> Counts:
+    """Only the shots with these electron numbers."""
+    keep = [in_sector(bits, electrons) for bits in counts.bits]
+    return Counts(
+        tuple(bits[k] for bits, k in zip(counts.bits, keep, strict=True)),
+        tuple(numbers[k] for numbers, k in zip(counts.numbers, keep, strict=True)),
+        counts.plan_digest,
+        counts.batches,
+    )
+
+
+def measured_density(plan: Plan, counts: Counts) -> tuple[Array, Array]:
+    """One-particle density matrices (n, n) of both spins that fit the occupations best, eigenvalues in 0 … 1.
+
+    Weighted least squares over all circuits; directions that no circuit sees are those of the uniform state. The
+    eigenvalues are shifted and clipped to the right number of electrons. Equal electron numbers share one matrix.
+    """
+    n = plan.orbitals
+    p, q = pair_indices(n)
+    rows, values = [], []
+    for fragment, bits, numbers in zip(plan.fragments, counts.bits, counts.numbers, strict=True):
+        shots = int(np.sum(numbers))
+        if not shots:
+            continue
+        means = ((numbers / shots) @ bits).reshape(2, n)
+        u = fragment.rotation
+        rows.append(np.sqrt(shots) * (u[p] * u[q] * np.where(p == q, 1.0, 2.0)[:, None]).T)
+        values.append(np.sqrt(shots) * means)
+    design = np.concatenate(rows)
+    result = []
+    for spin, electrons in enumerate(plan.electrons):
+        target = np.concatenate([v[spin] for v in values])
+        if plan.electrons[0] == plan.electrons[1]:
+            target = np.concatenate([v.mean(axis=0) for v in values])
+        start = np.where(p == q, electrons / n, 0.0)
+        solution = start + np.linalg.lstsq(design, target - design @ start, rcond=1e-9)[0]
+        matrix = np.zeros((n, n))
+        matrix[p, q] = matrix[q, p] = solution
+        result.append(_with_electrons(matrix, electrons))
+    return result[0], result[1]
+
+
+def model_state(plan: Plan, counts: Counts, reference: ReferenceState | None) -> ReferenceState:
+    """The smooth state that covariances are shrunk towards, with a little noise.
+
+    It is the uncorrelated state with the measured density matrix, or that and the reference in equal parts.
+    """
+    gaussian = GaussianState(*measured_density(plan, counts), hamiltonian_digest=plan.hamiltonian_digest)
+    if reference is None:
+        return gaussian.with_noise(MODEL_NOISE)
+    from fragkit.states import mixture
+
+    return mixture([(0.5, gaussian), (0.5, reference)]).with_noise(MODEL_NOISE)
+
+
+def shrunk_covariances(plan: Plan, counts: Counts, model: ReferenceState) -> Array:
+    """Covariances (K, n² + n, n² + n) of the features in each circuit: observed, with `MODEL_SHOTS` of the model."""
+    result = []
+    for fragment, bits, numbers in zip(plan.fragments, counts.bits, counts.numbers, strict=True):
+        expected = model.moments(fragment.rotation)[1]
+        shots = int(np.sum(numbers))
+        if shots:
+            features = evaluate_features(bits)
+            weights = numbers / shots
+            off = features - weights @ features
+            observed = (off * weights[:, None]).T @ off
+            expected = (shots * observed + MODEL_SHOTS * expected) / (shots + MODEL_SHOTS)
+        result.append(expected)
+    return np.array(result)
+
+
+def _with_electrons(matrix: Array, electrons: int) -> Array:
+    """Nearest matrix with eigenvalues in 0 … 1 and the given trace: shift and clip, the shift by bisection."""
+    values, vectors = np.linalg.eigh(matrix)
+    low, high = -1.0 - float(np.max(np.abs(values))), 1.0 + float(np.max(np.abs(values)))
+    for _ in range(200):
+        middle = 0.5 * (low + high)
+        if np.sum(np.clip(values + middle, 0.0, 1.0)) > electrons:
+            high = middle
+        else:
+            low = middle
+    clipped = np.clip(values + 0.5 * (low + high), 0.0, 1.0)
+    return (vectors * clipped) @ vectors.T
