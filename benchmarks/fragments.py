@@ -67,7 +67,7 @@ def seeds(quick: bool) -> None:
 def bound(quick: bool) -> None:
     print("\nAt the counting bound and below: residual ≤ 1e-6 Ha, starts until the first success")
     for name, count in HARD[: 5 if quick else 7]:
-        limit = 20.0 if quick else {"N2": 400.0, "NH3": 240.0}.get(name, 60.0)
+        limit = 20.0 if quick else {"N2": 200.0, "NH3": 150.0}.get(name, 40.0)
         strategy = Joint(count=count, tol=1e-6, starts=10_000, seconds=limit)
         run = fragment(molecule_hamiltonian(name), strategy, rng=0)
         print(f"{name:5} {count:3d}: {run.residual_norm:.1e} Ha, {run.seconds:6.1f} s. {run.message}", flush=True)

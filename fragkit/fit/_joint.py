@@ -16,7 +16,7 @@ from fragkit.fit._levenberg import Outcome, levenberg_marquardt, matrix_free_sol
 from fragkit.fit._pairs import pair_matrix
 from fragkit.fit._penalty import Penalty
 from fragkit.fit._point import Point, point_at
-from fragkit.fit._starts import LARGEST_TURN_OF_LARGE, TURNS, given_start, grown, low_rank_start, pruned, turned
+from fragkit.fit._starts import KICK, LARGEST_TURN_OF_LARGE, TURNS, given_start, grown, low_rank_start, pruned, turned
 
 Array = NDArray[np.float64]
 Start = Literal["low rank", "greedy"]
@@ -82,7 +82,7 @@ class Joint:
     tol: float = 1e-8
     relative: bool = False
     start: Start | Fragmentation = "low rank"
-    starts: int = 8
+    starts: int = 4
     max_iterations: int = 400
     penalty: float = 0.0
     one_norm_weight: float = 0.0
@@ -167,7 +167,7 @@ class _Run:
         best: Point | None = None
         self.starts_used = 0
         while self.starts_used < self.strategy.starts:
-            begin = self._start(count, self.starts_used, warm)
+            begin = self._start(count, self.starts_used, warm, best)
             self.starts_used += 1
             point = self._minimise(begin, best)
             if best is None or point.squared < best.squared:
@@ -177,8 +177,10 @@ class _Run:
         assert best is not None  # `starts` is at least one
         return best
 
-    def _start(self, count: int, number: int, warm: Point | None) -> Point:
+    def _start(self, count: int, number: int, warm: Point | None, best: Point | None) -> Point:
         rng, strategy = self.controls.rng, self.strategy
+        if best is not None and number >= 3 and number % 2 == 1:
+            return point_at(self.target, turned(best.rotations, KICK, rng), best.coefficients)
         if warm is not None:
             if number == 0:
                 return grown(self.target, pruned(self.target, warm, count), count, rng)

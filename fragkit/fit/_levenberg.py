@@ -45,7 +45,7 @@ def levenberg_marquardt(
     max_iterations: int,
     penalty: Penalty,
     damping: float = 1e-2,
-    patience: int = 40,
+    patience: int = 30,
     update: Callable[[Point, int], None] | None = None,
     out_of_time: Callable[[], bool] = lambda: False,
 ) -> Outcome:
