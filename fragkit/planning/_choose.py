@@ -7,10 +7,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Fragmentation, Hamiltonian
+from fragkit.core import Fragmentation, Hamiltonian, feature_count
 from fragkit.fit import Joint, fragment
 from fragkit.planning._counts import least_count
 from fragkit.planning._exact import Weighting, exact_coefficients
+from fragkit.planning._operators import OperatorSpace
 from fragkit.planning._rotations import optimise_rotations
 from fragkit.states import ReferenceState
 
@@ -109,6 +110,8 @@ def design_for(
     From `least_count` circuits on they are optimised. With fewer, generic rotations cannot reproduce the Hamiltonian:
     they are then fitted to it (`Joint`), which leaves little freedom to lower the cost.
     """
+    if is_one_determinant(hamiltonian):
+        return nothing_to_measure(hamiltonian)
     if count >= least_count(hamiltonian.orbitals):
         if isinstance(start, np.ndarray):
             start = start[distinct(start, 1e-3)]  # equal bases would leave too few different ones
@@ -149,6 +152,32 @@ def design_for(
     return from_fragments(hamiltonian, planned_on, fitted, settings)
 
 
+def is_one_determinant(hamiltonian: Hamiltonian) -> bool:
+    """Whether the sector has one state only, so that the energy is known without measuring."""
+    return all(count in (0, hamiltonian.orbitals) for count in hamiltonian.electrons)
+
+
+def nothing_to_measure(hamiltonian: Hamiltonian) -> Design:
+    """One circuit without coefficients: the energy is that of the only determinant."""
+    n = hamiltonian.orbitals
+    weighting = Weighting(
+        coefficients=np.zeros((1, feature_count(n))),
+        shares=np.ones(1),
+        constant=hamiltonian.determinant_energy(),
+        deviations=np.zeros(1),
+        residual_norm=0.0,
+        energy_bound=0.0,
+        relative_residual=0.0,
+        lower_bound=0.0,
+        dual=np.zeros(OperatorSpace(n).size),
+        sector_exact=True,
+        converged=True,
+        message="",
+    )
+    message = "The electron numbers leave one state only; its energy is known without measuring."
+    return Design(np.eye(n)[None], weighting, True, message, "single determinant")
+
+
 def from_fragments(
     hamiltonian: Hamiltonian, planned_on: ReferenceState, fragments: Fragmentation, settings: Settings
 ) -> Design:
@@ -167,6 +196,8 @@ def from_fragments(
 
 def fewest_circuits(hamiltonian: Hamiltonian, planned_on: ReferenceState, settings: Settings) -> Design:
     """A plan of the fewest circuits with which a fit reproduces the Hamiltonian exactly."""
+    if is_one_determinant(hamiltonian):
+        return nothing_to_measure(hamiltonian)
     fitted = fragment(
         hamiltonian,
         Joint(tol=1e-9, starts=max(4, settings.starts)),

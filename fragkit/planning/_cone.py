@@ -21,8 +21,7 @@ def cone_weights(design: WhitenedDesign, *, tolerance: float = 1e-8, iterations:
     design.reduce()  # equations that say the same twice stop the solver
     count, (rows, columns) = design.count, design.matrix.shape
     if not np.any(design.wanted) or columns == 0:
-        zero = np.zeros(count)
-        return Weights(zero, np.zeros(rows), 0.0, 0.0, True, 0, design.information(np.full(count, 1.0 / count)))
+        return Weights(np.zeros(count), np.zeros(rows), 0.0, 0.0, True, 0, None)
     scale = float(np.linalg.norm(design.wanted))
     # Variables: t (K), then x. The cones want −(t_m, x_m) + s = 0 with s in the cone.
     pieces, offset = [], count

@@ -182,6 +182,8 @@ def _refined(design: WhitenedDesign, found: Weights) -> Array:
         if now <= 1e-15 * wanted or now > 0.5 * size:
             break
         size = now
+        if information is None:
+            break
         step = design.coefficients(information.weights, information.inverse(left))
         coefficients = coefficients + design.features(step)
     return coefficients + design.free_part(design.residual(coefficients))

@@ -24,7 +24,10 @@ Array = NDArray[np.float64]
 
 @dataclass(frozen=True, eq=False)
 class Weights:
-    """Weights of least variance: the σ_m, the dual ν in the design's working basis, cost and lower bound in Ha²."""
+    """Weights of least variance: the σ_m, the dual ν in the design's working basis, cost and lower bound in Ha².
+
+    `information` is that of weights near these, for corrections; None when nothing needs to be measured.
+    """
 
     weights: Array
     dual: Array
@@ -32,7 +35,7 @@ class Weights:
     lower_bound: float
     converged: bool
     iterations: int
-    information: Information
+    information: Information | None
 
 
 def newton_weights(
@@ -48,6 +51,8 @@ def newton_weights(
     `start` is a first guess of the shares, `report(cost)` is called in every iteration.
     """
     count = design.count
+    if design.matrix.size == 0:
+        return Weights(np.zeros(count), np.zeros(design.matrix.shape[0]), 0.0, 0.0, True, 0, None)
     # A circuit that reads nothing but what is known (or free) needs no shots and would spoil the barrier.
     active = np.array([bool(np.any(design.matrix[:, block])) for block in design.blocks])
     weights = np.full(count, 1.0 / count) if start is None else np.maximum(start / np.sum(start), 1e-4 / count)
@@ -62,7 +67,7 @@ def newton_weights(
         if variance <= 0.0:
             # Everything that is wanted costs nothing.
             zero = np.zeros(count)
-            return Weights(zero, np.zeros_like(dual), 0.0, 0.0, True, iteration, information)
+            return Weights(zero, np.zeros_like(dual), 0.0, 0.0, True, iteration, None)
         # Along a ray V/s + s Σw is least at s = √(V/Σw); this also sets the scale of the first guess.
         scale = np.sqrt(variance / np.sum(weights))
         weights, dual, variance = weights * scale, dual / scale, variance / scale

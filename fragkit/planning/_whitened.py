@@ -183,5 +183,7 @@ class Information:
 
 def _range(matrix: Array, tolerance: float) -> Array:
     """Orthonormal basis of the column space: left singular vectors above `tolerance` times the largest column."""
+    if matrix.size == 0:
+        return np.zeros((len(matrix), 0))
     left, singular, _ = np.linalg.svd(matrix, full_matrices=False)
     return np.ascontiguousarray(left[:, singular > tolerance * max(1.0, singular[0])])
