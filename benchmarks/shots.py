@@ -11,8 +11,8 @@ divided among the fragments for the least cost; "+ all": all coefficients of lea
 and the Hamiltonian's own orbitals; "overlapping": commuting groups of Pauli strings with overlaps, coefficients divided
 for the least cost on full CI (`fragkit.pauli`); "plan": optimised rotations, default settings; "sharp": the same with
 less planning noise. "HF": the default plan on the Hartree-Fock state. "1 %": plan made for CISD with 1 % noise and
-four circuits more than the fewest that generic rotations allow, cost on full CI with 1 % noise over the quantum limit Var(H). "apart": default plan on CISD + 0.2 × random vector, over that
-state's Var(H). "seconds": of the default plan.
+four circuits more than the fewest that generic rotations allow, cost on full CI with 1 % noise over the quantum limit
+Var(H). "apart": default plan on CISD + 0.2 × random vector, over that state's Var(H). "seconds": of the default.
 """
 
 import argparse
