@@ -67,7 +67,7 @@ def seeds(quick: bool) -> None:
 def bound(quick: bool) -> None:
     print("\nAt the counting bound and below: residual ≤ 1e-6 Ha, starts until the first success")
     for name, count in HARD[: 5 if quick else 7]:
-        limit = 20.0 if quick else {"N2": 200.0, "NH3": 150.0}.get(name, 40.0)
+        limit = 20.0 if quick else {"N2": 160.0, "NH3": 120.0}.get(name, 40.0)
         strategy = Joint(count=count, tol=1e-6, starts=10_000, seconds=limit)
         run = fragment(molecule_hamiltonian(name), strategy, rng=0)
         print(f"{name:5} {count:3d}: {run.residual_norm:.1e} Ha, {run.seconds:6.1f} s. {run.message}", flush=True)
@@ -142,9 +142,9 @@ def water(basis: str, frozen: int) -> Hamiltonian:
 
 def large(quick: bool) -> None:
     print("\nLarger molecules: truncated low rank against joint fits (matrix-free)")
-    cases = [("H2O/cc-pVDZ", "cc-pvdz", 0, 30, (15.0, 60.0, 200.0))]
+    cases = [("H2O/cc-pVDZ", "cc-pvdz", 0, 30, (15.0, 60.0, 180.0))]
     if not quick:
-        cases.append(("H2O/aug-cc-pVDZ, 1s frozen", "aug-cc-pvdz", 1, 40, (120.0, 400.0)))
+        cases.append(("H2O/aug-cc-pVDZ, 1s frozen", "aug-cc-pvdz", 1, 40, (100.0, 300.0)))
     for label, basis, frozen, count, limits in cases:
         hamiltonian = water(basis, frozen)
         low = fragment(hamiltonian, LowRank(count=count))

@@ -12,7 +12,7 @@ from fragkit.fit._count_search import counting_bound, smallest_count
 from fragkit.fit._dense import dense_size, dense_solver
 from fragkit.fit._fit import Fit
 from fragkit.fit._greedy import Greedy
-from fragkit.fit._levenberg import Outcome, levenberg_marquardt, matrix_free_solver
+from fragkit.fit._levenberg import MatrixFreeSolver, Outcome, levenberg_marquardt
 from fragkit.fit._pairs import pair_matrix
 from fragkit.fit._penalty import Penalty
 from fragkit.fit._point import Point, point_at
@@ -22,8 +22,8 @@ Array = NDArray[np.float64]
 Start = Literal["low rank", "greedy"]
 Method = Literal["auto", "dense", "matrix-free"]
 
-# Entries of the Jacobian up to which it is built as a matrix: 16 fragments of 12 orbitals, 57 MB.
-DENSE_LIMIT = 16_000_000
+# Entries of the Jacobian up to which it is built as a matrix: 30 fragments of 14 orbitals, 1 GB with temporaries.
+DENSE_LIMIT = 40_000_000
 
 _METHOD_NAMES = {
     "dense": "Levenberg-Marquardt, normal equations by Cholesky factorisation",
@@ -228,11 +228,7 @@ class _Run:
         def out_of_time() -> bool:
             return self.out_of_time
 
-        solver_at = (
-            dense_solver
-            if method == "dense"
-            else matrix_free_solver(max_steps=30, accuracy=0.1, out_of_time=out_of_time)
-        )
+        solver_at = dense_solver if method == "dense" else MatrixFreeSolver(out_of_time=out_of_time)
         outcome = levenberg_marquardt(
             self.target,
             begin,
