@@ -26,7 +26,7 @@ from fragkit.pauli import (
     qubit_state,
     sorted_insertion,
 )
-from fragkit.pauli import _moments as moments_module
+from fragkit.pauli import _state as state_module
 
 ORDERS = ("interleaved", "blocked")
 LETTERS = {
@@ -170,7 +170,7 @@ def dense_state(terms: PauliTerms, electrons: tuple[int, int], vector: np.ndarra
 def test_variances_and_covariances_of_groups(
     order: str, electrons: tuple[int, int], dense_qubits: int, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    monkeypatch.setattr(moments_module, "_DENSE_QUBITS", dense_qubits)
+    monkeypatch.setattr(state_module, "DENSE_QUBITS", dense_qubits)
     rng = np.random.default_rng(5)
     ham = random_hamiltonian(3, 2, electrons)
     terms = jordan_wigner(ham, order=order)

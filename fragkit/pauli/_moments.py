@@ -7,11 +7,10 @@ one, so images are compared by their labels.
 import numpy as np
 from numpy.typing import NDArray
 
+from fragkit.pauli import _state
 from fragkit.pauli._groups import Indices
 from fragkit.pauli._state import Determinants, QubitState
 from fragkit.pauli._terms import Array, Masks, PauliTerms
-
-_DENSE_QUBITS = 22  # up to here a table of all basis states is faster than sorting the ones reached
 
 
 def group_variance(terms: PauliTerms, group: Indices, weights: Array, state: QubitState) -> float:
@@ -64,10 +63,10 @@ def _pure_moments(
         labels.append(state.labels ^ terms.x[members[0]])
         values.append(diagonal * state.amplitudes)
     reached, own, amplitudes = np.concatenate(labels), state.labels, state.amplitudes
-    if terms.qubits > _DENSE_QUBITS:
+    if terms.qubits > _state.DENSE_QUBITS:
         where, reached = np.unique(reached, return_inverse=True)
-        place = _positions(where, own)
-        own, amplitudes = place[place >= 0], amplitudes[place >= 0]
+        _, own, here = np.intersect1d(where, own, assume_unique=True, return_indices=True)
+        amplitudes = amplitudes[here]
     size = int(own.max(initial=0)) + 1
     moved = np.bincount(reached.astype(np.int64), weights=np.concatenate(values), minlength=size)
     return float(moved @ moved), float(moved[own] @ amplitudes)
@@ -80,13 +79,13 @@ def _pure_products(terms: PauliTerms, ordered: Indices, starts: Indices, state: 
     images = _signs(terms, ordered, state.labels) * state.amplitudes
     products, means = np.zeros((len(ordered), len(ordered))), np.zeros(len(ordered))
     for k, (a, b) in enumerate(zip(starts, stops, strict=True)):
-        target = _positions(state.labels, state.labels ^ masks[a])
+        target = state.find(state.labels ^ masks[a])
         here = np.flatnonzero(target >= 0)
         means[a:b] = images[a:b, here] @ state.amplitudes[target[here]]
         products[a:b, a:b] = images[a:b] @ images[a:b].T
         for c, d in zip(starts[k + 1 :], stops[k + 1 :], strict=True):
             # P_a |b⟩ sits at b ⊕ x_a, which the other string reaches from b ⊕ x_a ⊕ x_c.
-            source = _positions(state.labels, state.labels ^ (masks[a] ^ masks[c]))
+            source = state.find(state.labels ^ (masks[a] ^ masks[c]))
             here = np.flatnonzero(source >= 0)
             products[a:b, c:d] = images[a:b, here] @ images[c:d, source[here]].T
             products[c:d, a:b] = products[a:b, c:d].T
@@ -119,9 +118,3 @@ def _own_turns(terms: PauliTerms, members: Indices) -> NDArray[np.uint8]:
 def _starts(masks: Masks) -> Indices:
     """Where each run of equal masks begins."""
     return np.flatnonzero(np.r_[True, masks[1:] != masks[:-1]])
-
-
-def _positions(sorted_labels: Masks, wanted: Masks) -> Indices:
-    """Where each wanted label stands in a sorted list, −1 if it is not there."""
-    place = np.minimum(np.searchsorted(sorted_labels, wanted), len(sorted_labels) - 1)
-    return np.where(sorted_labels[place] == wanted, place, -1)

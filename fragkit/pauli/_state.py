@@ -1,6 +1,7 @@
 """A reference state as basis states of the qubits, for the expectation values of Pauli strings."""
 
 from dataclasses import dataclass
+from functools import cached_property
 from itertools import combinations
 from math import comb
 from typing import Any
@@ -12,6 +13,8 @@ from fragkit.core import Hamiltonian, InputError, MismatchError, as_real_array
 from fragkit.pauli._terms import Array, Masks, PauliTerms, qubit_places
 from fragkit.states import CIState, DeterminantState, MaximallyMixedState, MixedState
 
+DENSE_QUBITS = 22  # up to here a table of all basis states is faster than searching or sorting the ones reached
+
 
 @dataclass(frozen=True, eq=False)
 class Determinants:
@@ -19,6 +22,25 @@ class Determinants:
 
     labels: Masks
     amplitudes: Array
+
+    def find(self, labels: Masks) -> NDArray[np.intp]:
+        """Where each label stands in the list, −1 if it is not there."""
+        if self._table is not None:
+            # Labels beyond the table would be of other qubits; the largest own label bounds the table.
+            inside = labels < len(self._table)
+            return np.where(inside, self._table[np.where(inside, labels, 0).astype(np.intp)], -1)
+        place = np.minimum(np.searchsorted(self.labels, labels), len(self.labels) - 1)
+        return np.where(self.labels[place] == labels, place, -1)
+
+    @cached_property
+    def _table(self) -> NDArray[np.intp] | None:
+        """Position of every basis state, where a table of all of them is small enough to be faster than a search."""
+        size = int(self.labels.max(initial=0)) + 1
+        if size > 1 << DENSE_QUBITS:
+            return None
+        table = np.full(size, -1, dtype=np.intp)
+        table[self.labels.astype(np.intp)] = np.arange(len(self.labels))
+        return table
 
 
 @dataclass(frozen=True, eq=False)
