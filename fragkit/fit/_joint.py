@@ -52,7 +52,8 @@ class Joint:
         Fragmentation of the same Hamiltonian, which is grown or pruned to `count`. Further starts are turned at
         random.
     starts
-        Most starts for one number of fragments; the first that reaches `tol` ends the fit.
+        Most starts for one number of fragments; the first that reaches `tol` ends the fit. From the fourth on, every
+        other one leaves the best point found so far. At the counting bound tens of starts may be needed.
     max_iterations
         Most iterations for one start.
     penalty
@@ -227,6 +228,9 @@ class _Run:
 
         def out_of_time() -> bool:
             return self.out_of_time
+
+        # An interrupt in a long first iteration has something to return.
+        update(begin, 0)
 
         solver_at = dense_solver if method == "dense" else MatrixFreeSolver(out_of_time=out_of_time)
         outcome = levenberg_marquardt(
