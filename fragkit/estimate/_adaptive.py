@@ -15,6 +15,7 @@ from fragkit.estimate._estimate import Estimate
 from fragkit.estimate._least_variance import FixedShots
 from fragkit.estimate._moments import model_state, selected, shrunk_covariances
 from fragkit.estimate._readout import ReadoutErrors
+from fragkit.estimate._shares import whole_shots
 from fragkit.estimate._verb import check_counts, estimate_parts
 from fragkit.planning import Plan, reweighted
 from fragkit.states import ReferenceState
@@ -147,7 +148,7 @@ class AdaptiveRun:
         count = len(self.plan)
         if not self.rounds:
             # Half by the plan, half evenly: the plan's shares are what the pilot is to judge.
-            return _whole(0.5 * self.plan.shares + 0.5 / count, self.pilot_shots)
+            return whole_shots(0.5 * self.plan.shares + 0.5 / count, self.pilot_shots, MINIMUM_SHOTS)
         left = self.total_shots - self.used_shots
         if left < MINIMUM_SHOTS * count or (self.target_error is None and len(self.rounds) > 1):
             return None
@@ -164,7 +165,7 @@ class AdaptiveRun:
                 spend = {"target_error": self.target_error}
         chosen = self._chosen(_joined(self.rounds), **spend).shots
         if np.sum(chosen) > left:
-            chosen = _whole(chosen / np.sum(chosen), left)
+            chosen = whole_shots(chosen / np.sum(chosen), left, MINIMUM_SHOTS)
         return chosen
 
     def add(self, counts: Counts) -> "AdaptiveRun":
@@ -353,14 +354,3 @@ def run_adaptively(
 
 def _joined(rounds: tuple[Counts, ...]) -> Counts:
     return rounds[0].merged(*rounds[1:])
-
-
-def _whole(shares: Array, total: int) -> NDArray[np.int64]:
-    """`total` shots in these shares, at least the minimum each, by largest remainders."""
-    count = len(shares)
-    spare = total - MINIMUM_SHOTS * count
-    exact = shares / np.sum(shares) * spare
-    shots = np.floor(exact).astype(np.int64)
-    order = np.argsort(shots - exact)
-    shots[order[: spare - int(np.sum(shots))]] += 1
-    return shots + MINIMUM_SHOTS

@@ -1,7 +1,9 @@
 """Least-variance coefficients of any operator for circuits whose shots are already fixed."""
 
 from collections.abc import Sequence
+from copy import copy
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -35,7 +37,7 @@ class FixedShots:
         self,
         rotations: Array,
         covariances: Sequence[Array] | Array,
-        shots: NDArray[np.int64],
+        shots: NDArray[Any],
         electrons: tuple[int, int],
         *,
         shifts: bool,
@@ -47,6 +49,19 @@ class FixedShots:
         self._rotations = rotations
         self._shares = shots / np.sum(shots)
         self._information = self._design.information(self._shares)
+
+    def with_shots(self, shots: NDArray[Any]) -> "FixedShots":
+        """The same circuits and covariances with other shots."""
+        other = copy(self)
+        other._shares = shots / np.sum(shots)
+        other._information = self._design.information(other._shares)
+        return other
+
+    def slopes(self, rows: Array) -> Array:
+        """(K,) φ_m = νᵀ A_m C_m⁻¹ A_mᵀ ν of an operator: minus the derivative of its variance by the shares."""
+        design = self._design
+        response = design.matrix.T @ self._information.inverse(design.from_rows(rows))
+        return np.array([response[block] @ response[block] for block in design.blocks])
 
     def combination(self, rows: Array) -> Combination:
         """Coefficients for the operator with these rows of `OperatorSpace`."""
