@@ -1,18 +1,18 @@
 """Which rotations to measure in, for a given number of circuits."""
 
 import os
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Fragmentation, Hamiltonian, feature_count
+from fragkit.core import Fragmentation, Hamiltonian, InputError, feature_count
 from fragkit.fit import Joint, fragment
 from fragkit.planning._counts import least_count
-from fragkit.planning._exact import Weighting, exact_coefficients
+from fragkit.planning._exact import EXACT, Weighting, exact_coefficients
 from fragkit.planning._operators import OperatorSpace
-from fragkit.planning._rotations import optimise_rotations
+from fragkit.planning._rotations import RotationDesign, optimise_rotations
 from fragkit.states import ReferenceState
 
 Array = NDArray[np.float64]
@@ -107,40 +107,65 @@ def design_for(
 ) -> Design:
     """The best rotations found for a number of circuits.
 
-    From `least_count` circuits on they are optimised. With fewer, generic rotations cannot reproduce the Hamiltonian:
-    they are then fitted to it (`Joint`), which leaves little freedom to lower the cost.
+    With fewer than `least_count` circuits generic rotations cannot reproduce the Hamiltonian; the optimisation then
+    keeps them where they can, which takes longer. Near the smallest possible number that fails, and the rotations of
+    a fit are taken.
+
+    Raises
+    ------
+    InputError
+        If not even a fit reproduces the Hamiltonian with so few circuits.
     """
     if is_one_determinant(hamiltonian):
         return nothing_to_measure(hamiltonian)
-    if count >= least_count(hamiltonian.orbitals):
-        if isinstance(start, np.ndarray):
-            start = start[distinct(start, 1e-3)]  # equal bases would leave too few different ones
-        found = optimise_rotations(
-            hamiltonian,
-            planned_on,
-            count,
-            start=start,
-            starts=settings.starts,
-            rng=settings.rng,
-            tolerance=settings.tolerance,
-            max_evaluations=settings.max_evaluations,
-            progress=settings.progress,
-            checkpoint=settings.checkpoint,
-            resume=settings.resume,
-            on_interrupt="return",
-        )
-        # Close to the solution the cost converges twice as fast as its lower bound; large factorisations are saved.
-        gap = 1e-5 if hamiltonian.orbitals <= 10 else 1e-3
-        rotations, weighting = weighted(
-            hamiltonian, planned_on, found.rotations, shifts=settings.shifts, start=found.shares, tolerance=gap
-        )
-        return Design(
-            rotations,
-            weighting,
-            found.converged and weighting.converged,
-            found.message if weighting.converged else f"{found.message} {weighting.message}",
-            "optimised rotations, least-variance coefficients",
-        )
+    if isinstance(start, np.ndarray) and count >= least_count(hamiltonian.orbitals):
+        start = start[distinct(start, 1e-3)]  # equal bases would leave too few different ones
+    try:
+        found = _optimised(hamiltonian, planned_on, count, settings, start)
+    except InputError as error:
+        if count >= least_count(hamiltonian.orbitals):
+            raise
+        return _fitted(hamiltonian, planned_on, count, settings, error)
+    # Close to the solution the cost converges twice as fast as its lower bound; large factorisations are saved.
+    gap = 1e-5 if hamiltonian.orbitals <= 10 else 1e-3
+    rotations, weighting = weighted(
+        hamiltonian, planned_on, found.rotations, shifts=settings.shifts, start=found.shares, tolerance=gap
+    )
+    if weighting.relative_residual > EXACT and count < least_count(hamiltonian.orbitals):
+        problem = InputError(f"the optimisation ended with a relative residual of {weighting.relative_residual:.2g}")
+        return _fitted(hamiltonian, planned_on, count, settings, problem)
+    return Design(
+        rotations,
+        weighting,
+        found.converged and weighting.converged,
+        found.message if weighting.converged else f"{found.message} {weighting.message}",
+        "optimised rotations, least-variance coefficients",
+    )
+
+
+def _optimised(
+    hamiltonian: Hamiltonian, planned_on: ReferenceState, count: int, settings: Settings, start: Any
+) -> RotationDesign:
+    return optimise_rotations(
+        hamiltonian,
+        planned_on,
+        count,
+        start=start,
+        starts=settings.starts,
+        rng=settings.rng,
+        tolerance=settings.tolerance,
+        max_evaluations=settings.max_evaluations,
+        progress=settings.progress,
+        checkpoint=settings.checkpoint,
+        resume=settings.resume,
+        on_interrupt="return",
+    )
+
+
+def _fitted(
+    hamiltonian: Hamiltonian, planned_on: ReferenceState, count: int, settings: Settings, reason: InputError
+) -> Design:
+    """Rotations of a fit, for so few circuits that the optimisation cannot keep them exact."""
     fitted = fragment(
         hamiltonian,
         Joint(count=count, tol=1e-9, starts=max(4, settings.starts)),
@@ -149,7 +174,14 @@ def design_for(
         progress=settings.progress,
         on_interrupt="return",
     )
-    return from_fragments(hamiltonian, planned_on, fitted, settings)
+    if not fitted.converged:
+        raise InputError(
+            f"`circuits` must be larger for {hamiltonian.orbitals} orbitals (got {count}): {fitted.message} "
+            "circuits='minimal' finds the fewest that can be exact"
+        ) from reason
+    design = from_fragments(hamiltonian, planned_on, fitted, settings)
+    note = "So few circuits leave no room to optimise: the rotations are those of a fit to the integrals."
+    return replace(design, message=f"{design.message} {note}")
 
 
 def is_one_determinant(hamiltonian: Hamiltonian) -> bool:
@@ -206,6 +238,5 @@ def fewest_circuits(hamiltonian: Hamiltonian, planned_on: ReferenceState, settin
         progress=settings.progress,
         on_interrupt="return",
     )
-    if len(fitted) >= least_count(hamiltonian.orbitals):
-        return design_for(hamiltonian, planned_on, least_count(hamiltonian.orbitals), settings)
-    return from_fragments(hamiltonian, planned_on, fitted, settings)
+    rotations = np.stack([piece.rotation for piece in fitted])
+    return design_for(hamiltonian, planned_on, len(rotations), settings, start=rotations)

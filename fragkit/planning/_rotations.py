@@ -13,7 +13,6 @@ from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian_covariances import Covariances
 from fragkit.planning._rotations_file import RotationsFile
 from fragkit.planning._rotations_run import Run
-from fragkit.planning._rotations_run import least_count as least_count
 from fragkit.planning._rotations_start import starting_rotations
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.states import ReferenceState
@@ -194,7 +193,7 @@ def optimise_rotations(
         if file is not None and runs:
             best = min(runs, key=lambda run: run.best.cost).best
             file.write(best.rotations, best.shares, spent + runs[0].evaluations)
-    best = runs[0].best
+    best = runs[0].finish()
     total = spent + runs[0].evaluations
     return RotationDesign(
         rotations=best.rotations,

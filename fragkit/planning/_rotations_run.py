@@ -7,6 +7,7 @@ import numpy as np
 from numpy.typing import NDArray
 from threadpoolctl import ThreadpoolController
 
+from fragkit.planning._counts import least_count
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian import Lagrangian, Point
 from fragkit.planning._lagrangian_covariances import Covariances
@@ -35,13 +36,13 @@ class Run:
         self._covariances = covariances
         count, n = len(rotations), design.orbitals
         weights = np.full(count, 1.0 / count) if shares is None else shares
-        # Too few circuits for generic rotations: rotations then have to give way to reach exactness.
-        self._joint = count < least_count(n)
-        if self._joint:
-            first = restore(design, covariances, rotations, first_coefficients(design, rotations))
+        # From `least_count` on exact coefficients exist at almost every rotation, and they make the better start.
+        self._generic = count >= least_count(n)
+        if self._generic:
+            coefficients = refresh(design, covariances, rotations, weights, iterations=3).coefficients
         else:
-            first = refresh(design, covariances, rotations, weights, iterations=4)
-        self.current = self.best = first
+            coefficients = first_coefficients(design, rotations)
+        self.current = self.best = restore(design, covariances, rotations, coefficients)
         self._memory = Memory(MEMORY, count * (n * (n - 1) // 2 + design.features.shape[1]))
         self._penalty = FIRST_PENALTY
         self.evaluations = 0
@@ -68,12 +69,8 @@ class Run:
         with _linear_algebra().limit(limits=1, user_api="blas"):
             end = self._descend(lagrangian, steps, report)
         rotations = _orthonormal(end.rotations)
-        if self._joint:
-            coefficients = np.einsum("kfr,kr->kf", self.current.scale, end.scaled)
-            new = restore(self._design, self._covariances, rotations, coefficients)
-        else:
-            deviations = np.sqrt(np.maximum(end.moments[0], 0.0))
-            new = refresh(self._design, self._covariances, rotations, deviations / deviations.sum())
+        coefficients = np.einsum("kfr,kr->kf", self.current.scale, end.scaled)
+        new = restore(self._design, self._covariances, rotations, coefficients)
         self.history.append((self.evaluations, new.cost))
         worse = new.cost > 1.02 * self.best.cost or new.infeasibility > FEASIBLE
         if worse and self.best.infeasibility <= FEASIBLE:
@@ -87,6 +84,14 @@ class Run:
         self.current = new
         if self.best.infeasibility > FEASIBLE or new.cost < self.best.cost:
             self.best = new
+
+    def finish(self) -> Refresh:
+        """The best refresh, with coefficients of least variance for its rotations where these alone are exact."""
+        if self._generic:
+            best = refresh(self._design, self._covariances, self.best.rotations, self.best.shares, iterations=3)
+            if best.cost < self.best.cost and best.infeasibility <= FEASIBLE:
+                self.best = best
+        return self.best
 
     def _descend(self, lagrangian: Lagrangian, steps: int, report: Callable[[int, float], None]) -> Point:
         base = self.current
@@ -140,17 +145,6 @@ class Run:
             lambda rows: mapped(rows, ratio, forward.transpose(0, 2, 1)),
             lambda rows: mapped(rows, 1.0 / ratio, backward.transpose(0, 2, 1)),
         )
-
-
-def least_count(orbitals: int) -> int:
-    """Fewest generic rotations that reproduce every Hamiltonian of n orbitals, ⌈(n+1)(n+2)/4⌉.
-
-    Modulo operators that are constant in the sector each brings n(n−1)/2 new opposite-spin rows.
-
-    >>> [least_count(n) for n in (2, 6, 7, 8, 10, 12)]
-    [3, 14, 18, 23, 33, 46]
-    """
-    return -(-(orbitals + 1) * (orbitals + 2) // 4)
 
 
 @cache

@@ -1,6 +1,6 @@
 """Cost against number of circuits."""
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -125,8 +125,8 @@ def trade_off(
     hamiltonian, state
         As for `fragkit.plan`.
     counts
-        Numbers of circuits; from the fewest that generic rotations allow, (n+1)(n+2)/4, to twice that when None.
-        Below that number rotations are fitted to the Hamiltonian, and cost much more.
+        Numbers of circuits; seven from 0.7 to 1.6 times the fewest that generic rotations allow, (n+1)(n+2)/4, when
+        None.
     target_error, total_shots, minimum_shots, time_model, shifts, planning_noise, rng, tolerance, max_evaluations
         As for `fragkit.plan`.
     progress
@@ -152,7 +152,7 @@ def trade_off(
     check_state(state, hamiltonian.orbitals, hamiltonian.electrons)
     fewest = least_count(hamiltonian.orbitals)
     if counts is None:
-        counts = sorted({fewest + round(k * fewest / 5) for k in range(6)})
+        counts = sorted({round(fewest * (0.7 + 0.15 * k)) for k in range(7)})
     numbers = sorted({as_count(k, "counts", minimum=1) for k in counts})
     if not numbers:
         raise InputError("`counts` must hold at least one number of circuits (got none)")
@@ -164,8 +164,6 @@ def trade_off(
         warm = designs[-1].rotations if designs and len(designs[-1].rotations) <= count else None
         designs.append(design_for(hamiltonian, planned_on, count, settings, start=warm))
     for k in range(len(numbers) - 2, -1, -1):
-        if numbers[k] < fewest:
-            break
         shares = designs[k + 1].weighting.shares
         heavy = np.sort(np.argsort(-shares)[: numbers[k]])
         again = design_for(hamiltonian, planned_on, numbers[k], settings, start=designs[k + 1].rotations[heavy])
@@ -188,12 +186,3 @@ def plan_seconds(plans: Sequence[Plan], budget: Budget) -> Array | None:
             for plan in plans
         ]
     )
-
-
-def growing_counts(orbitals: int, maximum: int | None) -> Iterator[int]:
-    """Numbers of circuits to try, from the fewest that generic rotations allow, in growing steps."""
-    count, step = least_count(orbitals), 2
-    while maximum is None or count <= maximum:
-        yield count
-        count += step
-        step = max(2, round(0.15 * count))

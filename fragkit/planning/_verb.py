@@ -22,10 +22,11 @@ from fragkit.planning._choose import (
 )
 from fragkit.planning._cost import check_state
 from fragkit.planning._counts import least_count
+from fragkit.planning._exact import EXACT
 from fragkit.planning._plan import Plan
 from fragkit.planning._robust import PLANNING_NOISE, robust_state, share_state
 from fragkit.planning._threads import sized_blas_threads
-from fragkit.planning._trade_off import growing_counts, plan_seconds
+from fragkit.planning._trade_off import plan_seconds
 from fragkit.states import ReferenceState
 
 
@@ -67,9 +68,9 @@ def plan(
         The expected state, from `reference_state`.
     circuits
         Number of circuits. None takes two more than the fewest with which generic rotations reproduce the Hamiltonian,
-        ⌈(n+1)(n+2)/4⌉ + 2. "auto" raises the number until a further circuit costs more than the shots it saves;
-        "minimal" takes the fewest with which a fit reproduces the Hamiltonian, at 10 to 100 times the shots. Circuits
-        that need no shots are left out.
+        ⌈(n+1)(n+2)/4⌉ + 2. "auto" looks for the number from which on a further circuit costs more than the shots it
+        saves; "minimal" takes the fewest with which a fit reproduces the Hamiltonian, at up to 100 times the shots.
+        Circuits that need no shots are left out.
     fragments
         Measure the rotations of this fragmentation; together with `circuits`, start the optimisation from them.
     reweight
@@ -230,18 +231,39 @@ def _knee(
 ) -> Design:
     """The number of circuits from which on a further circuit costs more than the shots it saves."""
     fewest = least_count(hamiltonian.orbitals)
-    if limit is not None and limit < fewest:
-        return design_for(hamiltonian, planned_on, limit, settings)
     best: Design | None = None
     least = np.inf
-    warm = None
-    for count in growing_counts(hamiltonian.orbitals, limit):
-        design = design_for(hamiltonian, planned_on, count, settings, start=warm)
-        made = plan_of_design(hamiltonian, state, design, budget, planning_noise)
-        spent = _spent(made, budget, overhead)
-        if best is not None and spent >= least:
+
+    def better(count: int, warm: Any) -> bool:
+        """Try a number of circuits; keep it if it spends less than the best so far."""
+        nonlocal best, least
+        try:
+            design = design_for(hamiltonian, planned_on, count, settings, start=warm)
+        except InputError:
+            if best is None:
+                raise
+            return False  # so few circuits cannot be exact
+        spent = _spent(plan_of_design(hamiltonian, state, design, budget, planning_noise), budget, overhead)
+        if best is not None and (spent >= least or design.weighting.relative_residual > EXACT):
+            return False
+        best, least = design, spent
+        return True
+
+    count = fewest if limit is None else min(fewest, limit)
+    first = count
+    better(count, None)
+    step = 2
+    while best is not None and (limit is None or count + step <= limit):
+        count += step
+        if not better(count, best.rotations):
             break
-        best, least, warm = design, spent, design.rotations
+        step = max(2, round(0.15 * count))
+    # Fewer than generic rotations allow: worth a look when more are not better. A third of that number is never exact.
+    while best is not None and len(best.rotations) <= first and first > 2 + fewest // 3:
+        first -= max(1, round(0.1 * fewest))
+        heavy = np.sort(np.argsort(-best.weighting.shares)[:first])
+        if not better(first, best.rotations[heavy]):
+            break
     if best is None:
         raise RuntimeError("no number of circuits was tried")
     return replace(best, message=f"{best.message} {len(best.rotations)} circuits are the knee.")
