@@ -5,9 +5,11 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.linalg import cho_factor, cho_solve
 
-from fragkit.core import InputError
+from fragkit.core import as_count
 from fragkit.pauli._groups import Indices
 from fragkit.pauli._terms import Array, PauliTerms
+
+_STEP = 1.5  # 1 is Neyman's rule; above 2 the alternation may cycle
 
 
 @dataclass(frozen=True, eq=False, repr=False)
@@ -51,8 +53,9 @@ def least_cost_split(
 
     The problem is convex. At shot shares w the best division is c_g = w_g C_g⁻¹ ν_g with
     (Σ_g w_g C_g⁻¹) ν = c, matrices placed at the terms of each group (generalised least squares: Aitken 1936); at
-    given coefficients the best shares are w_g ∝ σ_g (Neyman 1934). Alternating the two never raises the cost, and
-    every ν bounds the least cost from below by (cᵀν)² / max_g ν_gᵀ C_g⁻¹ ν_g (Cauchy-Schwarz).
+    given coefficients the best shares are w_g ∝ σ_g (Neyman 1934). The two alternate, shares going half as far again
+    as that, which was measured to halve the iterations; the best division is kept. Every ν bounds the least cost from
+    below by (cᵀν)² / max_g ν_gᵀ C_g⁻¹ ν_g (Cauchy-Schwarz).
 
     Parameters
     ----------
@@ -66,24 +69,30 @@ def least_cost_split(
     wanted = terms.coefficients
     inverses = [_inverse(matrix, regularisation) for matrix in covariances]
     shares = np.full(len(groups), 1.0 / len(groups))
-    lower, before = 0.0, np.inf
-    for step in range(1, iterations + 1):
+    lower, least, before = 0.0, np.inf, np.inf
+    best: tuple[list[Array], Array] = ([], np.zeros(0))
+    for step in range(1, as_count(iterations, "iterations", minimum=1) + 1):
         coefficients, bound = _divide(wanted, groups, inverses, shares)
         lower = max(lower, bound)
         variances = np.array([c @ matrix @ c for c, matrix in zip(coefficients, covariances, strict=True)])
         deviations = np.sqrt(np.maximum(variances, 0.0))
         regularised = np.sqrt(deviations**2 + [regularisation * float(c @ c) for c in coefficients])
         cost = float(np.sum(regularised)) ** 2
-        settled = step % 20 == 0 and before - cost < 0.01 * tolerance * cost
-        before = cost if step % 20 == 0 else before
-        if cost <= lower * (1.0 + tolerance) or settled or step == iterations:
-            converged = settled or cost <= lower * (1.0 + tolerance)
-            how = "converged" if converged else "NOT converged (raise `iterations`)"
-            message = f"{how} after {step} iterations, {cost / lower - 1.0:.2g} above the lower bound"
-            total = float(np.sum(deviations)) ** 2
-            return Split(tuple(coefficients), deviations, total, lower, step, converged, message)
-        shares = regularised / np.sum(regularised)
-    raise InputError(f"`iterations` must be at least 1 (got {iterations})")
+        if cost < least:
+            least, best = cost, (coefficients, deviations)
+        converged = least <= lower * (1.0 + tolerance)
+        if step % 20 == 0:
+            converged |= before - least < 0.01 * tolerance * least
+            before = least
+        if converged or step == iterations:
+            break
+        # The floor keeps the normal matrix regular when a group loses all its work to others.
+        shares = np.maximum(shares * (regularised / shares) ** _STEP, 1e-12 * np.sum(regularised))
+        shares /= np.sum(shares)
+    how = "converged" if converged else "NOT converged (raise `iterations`)"
+    message = f"{how} after {step} iterations, {least / lower - 1.0:.2g} above the lower bound"
+    total = float(np.sum(best[1])) ** 2
+    return Split(tuple(best[0]), best[1], total, lower, step, converged, message)
 
 
 def _divide(wanted: Array, groups: list[Indices], inverses: list[Array], shares: Array) -> tuple[list[Array], float]:
