@@ -1,18 +1,23 @@
 """Shots of optimised plans against the usual ways to measure, all computed in one run.
 
-    python benchmarks/shots.py [--quick] [--molecules LiH,H2O] [--starts 1] [--figure docs/figures/trade_off.png]
+    python benchmarks/shots.py [--quick] [--part table] [--molecules LiH,H2O] [--starts 1]
+    python benchmarks/shots.py --part noise|gap|figure [--quick] [--figure docs/figures/trade_off.png]
 
 Cost is shots × error² in Ha², times 1e6 the shots for a standard error of 1 mEh. Coefficients, rotations and shares
 are chosen on CISD; every cost is evaluated on the full CI state, at the shot shares of the plan (baselines: at the best
 shares for that state). Molecules: STO-3G, every bond 1.0 Å, geometries of the tests. All data are computed here.
 
-Columns: "low rank": eigenvectors of the two-electron tensor, coefficients as they are; "+one-body": their linear terms
-divided among the fragments for the least cost; "+ all": all coefficients of least variance on the low-rank rotations
-and the Hamiltonian's own orbitals; "overlapping": commuting groups of Pauli strings with overlaps, coefficients divided
-for the least cost on full CI (`fragkit.pauli`); "plan": optimised rotations, default settings; "sharp": the same with
-less planning noise. "HF": the default plan on the Hartree-Fock state. "1 %": plan made for CISD with 1 % noise and
-four circuits more than the fewest that generic rotations allow, cost on full CI with 1 % noise over the quantum limit
-Var(H). "apart": default plan on CISD + 0.2 × random vector, over that state's Var(H). "seconds": of the default.
+Part "table". "low rank": eigenvectors of the two-electron tensor, coefficients as they are; "+one-body": their linear
+terms divided among the fragments for the least cost; "+ all": all coefficients of least variance on the low-rank
+rotations and the Hamiltonian's own orbitals; "overlapping": commuting groups of Pauli strings with overlaps,
+coefficients divided for the least cost on full CI (`fragkit.pauli`); "plan": optimised rotations, default settings;
+"sharp": the same with less planning noise. "HF": the default plan on the Hartree-Fock state. "1 %": plan made for CISD
+with 1 % noise and four circuits more than the fewest that generic rotations allow, cost on full CI with 1 % noise over
+the quantum limit Var(H). "apart": default plan on CISD + 0.2 × random vector, over that state's Var(H). "seconds": of
+the default plan.
+
+Part "noise": what the noise that is mixed into the reference does, and plans for the bare Hartree-Fock determinant.
+Part "gap": how far plans are from the best with any rotations. Part "figure": cost against number of circuits.
 """
 
 import argparse
@@ -25,7 +30,7 @@ import numpy as np
 from fragkit.core import Fragmentation, Hamiltonian
 from fragkit.fit import fragment
 from fragkit.pauli import pauli_costs
-from fragkit.planning import exact_coefficients, plan, plan_cost, trade_off
+from fragkit.planning import exact_coefficients, optimality_gap, plan, plan_cost, reweighted, trade_off
 from fragkit.planning._counts import least_count
 from fragkit.states import ReferenceState, reference_state
 
@@ -87,10 +92,7 @@ def row(name: str, circuits: int, starts: int, quick: bool) -> str:
     most = least_count(hamiltonian.orbitals) + 4
     robust = plan(hamiltonian, cisd.with_noise(0.01), circuits=most, minimum_shots=1, starts=starts)
     ratio = plan_cost(robust, noisy) / noisy.variance(hamiltonian)
-    rng = np.random.default_rng(1)
-    vector = rng.standard_normal(cisd.vector.shape)
-    vector = cisd.vector + 0.2 * vector / np.linalg.norm(vector)
-    apart = ReferenceState.from_ci_vector(hamiltonian, vector / np.linalg.norm(vector))
+    apart = apart_from(cisd, hamiltonian)
     away = plan_cost(default, apart) / apart.variance(hamiltonian)
     converged = "" if default.converged and sharpest.converged and robust.converged else "  (not converged)"
     return (
@@ -120,17 +122,72 @@ def draw(path: Path, quick: bool) -> None:
     print(f"\nwritten: {path}")
 
 
+def apart_from(cisd, hamiltonian: Hamiltonian, seed: int = 1) -> ReferenceState:
+    """CISD + 0.2 × random vector, normalised."""
+    vector = np.random.default_rng(seed).standard_normal(cisd.vector.shape)
+    vector = cisd.vector + 0.2 * vector / np.linalg.norm(vector)
+    return ReferenceState.from_ci_vector(hamiltonian, vector / np.linalg.norm(vector))
+
+
+def noise_part(name: str, circuits: int) -> None:
+    """Cost on several states against the noise that plans were made with."""
+    hamiltonian = molecule_hamiltonian(name)
+    true = ReferenceState.from_ci_vector(hamiltonian, full_ci(name)[1])
+    cisd, hf = reference_state(hamiltonian, "cisd"), reference_state(hamiltonian, "hf")
+    apart, noisy = apart_from(cisd, hamiltonian), true.with_noise(0.01)
+    print(f"{name}, {circuits} circuits: cost / Ha^2; the last two over the quantum limit of the state")
+    print(f"{'reference':>22}{'noise':>8}{'CISD':>9}{'full CI':>9}{'HF':>9}{'full CI, 1 %':>14}{'apart':>8}")
+
+    def show(label: str, noise: float, made) -> None:
+        print(
+            f"{label:>22}{noise:8.0e}{plan_cost(made, cisd):9.4f}{plan_cost(made, true):9.4f}{plan_cost(made, hf):9.3f}"
+            f"{plan_cost(made, noisy) / noisy.variance(hamiltonian):14.3f}"
+            f"{plan_cost(made, apart) / apart.variance(hamiltonian):8.3f}",
+            flush=True,
+        )
+
+    for noise in (1e-4, 3e-4, 1e-3, 3e-3, 1e-2):
+        show("CISD", noise, plan(hamiltonian, cisd, circuits=circuits, planning_noise=noise, minimum_shots=1))
+    from_determinant = plan(hamiltonian, hf, circuits=circuits, minimum_shots=1)
+    show("HF", 1e-3, from_determinant)
+    show("HF, then CISD", 1e-3, reweighted(from_determinant, hamiltonian, cisd, minimum_shots=1))
+
+
+def gap_part(names: list[str]) -> None:
+    """Distance of default plans from the best with any number of rotations, in the reference with planning noise."""
+    print(f"{'':6}{'circuits':>9}{'cost':>10}{'bound':>10}{'ratio':>8}{'quantum limit':>15}{'seconds':>9}")
+    for name in names:
+        hamiltonian = molecule_hamiltonian(name)
+        cisd = reference_state(hamiltonian, "cisd")
+        made = plan(hamiltonian, cisd)
+        began = time.perf_counter()
+        gap = optimality_gap(made, hamiltonian, cisd)
+        print(
+            f"{name:6}{len(made):9d}{gap.cost:10.4g}{gap.lower_bound:10.4g}{gap.ratio:8.3f}{gap.quantum_limit:15.4g}"
+            f"{time.perf_counter() - began:9.1f}  {gap.message}",
+            flush=True,
+        )
+
+
 def main() -> None:
     parser = argparse.ArgumentParser(description=(__doc__ or "").split("\n")[0])
     parser.add_argument("--quick", action="store_true", help="the smallest molecules only, without Pauli groups")
     parser.add_argument("--molecules", help="comma-separated names")
     parser.add_argument("--starts", type=int, default=1, help="independent starts of the optimisation")
-    parser.add_argument("--figure", type=Path, help="draw the trade-off curves into this file instead")
+    parser.add_argument("--part", choices=("table", "noise", "gap", "figure"), default="table")
+    parser.add_argument("--figure", type=Path, default=Path("trade_off.png"), help="file of the figure")
     options = parser.parse_args()
-    if options.figure is not None:
+    names = options.molecules.split(",") if options.molecules else (QUICK if options.quick else tuple(CIRCUITS))
+    if options.part == "figure":
         draw(options.figure, options.quick)
         return
-    names = options.molecules.split(",") if options.molecules else (QUICK if options.quick else tuple(CIRCUITS))
+    if options.part == "noise":
+        for name in names if options.molecules else ("H4",) if options.quick else ("H2O",):
+            noise_part(name, CIRCUITS[name][0])
+        return
+    if options.part == "gap":
+        gap_part(list(names) if options.molecules else ["H4"] if options.quick else ["H4", "LiH", "H2O"])
+        return
     print(
         f"{'':6}{'low rank':>10}{'+one-body':>10}{'+ all':>10}{'overlapping':>12}{'circuits':>9}{'plan':>10}"
         f"{'sharp':>10}{'HF':>9}{'1 %':>8}{'apart':>8}{'seconds':>9}"
