@@ -378,3 +378,18 @@ def test_any_damage_is_an_input_error(
     except InputError:
         return
     assert_same(back, plan)
+
+
+def test_example_of_the_documentation_gives_the_energy(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """The plain Python of docs/files.md, run as it stands there."""
+    page = (Path(__file__).parents[1] / "docs" / "files.md").read_text(encoding="utf-8")
+    code = page.split("```python\n")[1].split("```")[0]
+    plan = some_plan(n=3)
+    plan.save(tmp_path / "water.plan.json")
+    monkeypatch.chdir(tmp_path)
+    rng = np.random.default_rng(3)
+    bits = [rng.integers(0, 2, size=(4, 6)).astype(np.uint8) for _ in plan.fragments]
+    space: dict[str, Any] = {"bits": [rows.astype(int).tolist() for rows in bits]}
+    exec(code, space)
+    means = [fragment.values(rows).mean() for fragment, rows in zip(plan.fragments, bits, strict=True)]
+    assert space["energy"] == pytest.approx(plan.constant + sum(means), abs=1e-12)
