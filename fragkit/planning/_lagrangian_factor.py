@@ -38,7 +38,7 @@ class Factor:
         """M⁻¹ applied to a vector."""
         return self._potrs(self._factor, rows.astype(self._kind), lower=1)[0].astype(np.float64)
 
-    def half_solve(self, rows: Array) -> Array:
+    def half_solve(self, rows: NDArray[Any]) -> NDArray[Any]:
         """L⁻¹ applied to the columns of a matrix, M = L Lᵀ."""
         return self._trtrs(self._factor, rows.astype(self._kind), lower=1)[0]
 

@@ -97,7 +97,7 @@ def refresh(
         weights = deviations / deviations.sum()
     scale = np.sqrt(used)[:, None, None] * (design.features @ halves.transpose(0, 2, 1))
     coefficients, left = _refined(design, rotations, scale, response, blocks, information)
-    unscale = np.linalg.pinv(scale)
+    unscale: Array = np.asarray(np.linalg.pinv(scale), dtype=np.float64)
     scaled = np.einsum("krf,kf->kr", unscale, coefficients)
     deviations = np.sqrt(used) * np.linalg.norm(scaled, axis=1)
     total = float(deviations.sum())
@@ -114,7 +114,7 @@ def refresh(
         shares=weights,
         cost=total**2,
         infeasibility=left,
-        dual=2.0 * dual,
+        dual=np.asarray(2.0 * dual),
         scale=scale,
         unscale=unscale,
         scaled=scaled,
