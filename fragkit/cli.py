@@ -306,6 +306,7 @@ def _compare(options: argparse.Namespace) -> int:
     ways = {
         "Pauli, qubit-wise groups": pauli_costs(hamiltonian, state, "qubit-wise"),
         "Pauli, commuting groups": pauli_costs(hamiltonian, state, "commuting"),
+        "Pauli, overlapping groups": pauli_costs(hamiltonian, state, "overlapping"),
         "low rank": fragkit.plan(hamiltonian, state, fragments=low_rank, reweight=False),
         "low rank, best coefficients": fragkit.plan(hamiltonian, state, fragments=low_rank),
         "optimised": fragkit.plan(hamiltonian, state, circuits=options.circuits, rng=options.seed),

@@ -96,7 +96,7 @@ def test_compare_puts_the_optimised_plan_last_and_lowest(job: Path, capsys: pyte
         line for line in capsys.readouterr().out.splitlines() if line.startswith(("Pauli", "low rank", "optimised"))
     ]
     costs = [float(row.rsplit(maxsplit=3)[1]) for row in rows]
-    assert len(costs) == 5
+    assert len(costs) == 6
     assert costs[-1] == min(costs)
 
 
