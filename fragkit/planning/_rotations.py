@@ -163,6 +163,19 @@ def optimise_rotations(
         first = starting_rotations(hamiltonian, count, start, generator)
 
     design = DesignMap(hamiltonian)
+    if not np.linalg.norm(design.target) > 1e-12 * np.linalg.norm(design.space.hamiltonian_rows(hamiltonian)):
+        return RotationDesign(
+            rotations=first,
+            coefficients=np.zeros((count, n * n + n)),
+            shares=np.full(count, 1.0 / count),
+            cost=0.0,
+            cost_history=np.array([[0, 0.0]]),
+            infeasibility=0.0,
+            evaluations=0,
+            seconds=time.perf_counter() - began,
+            converged=True,
+            message="The Hamiltonian is a constant in this sector: nothing has to be measured.",
+        )
     covariances = Covariances(state, design, float(ridge))
     bar = _Bar(progress, limit)
     runs: list[Run] = []
