@@ -155,6 +155,9 @@ def test_planning_noise_counts_the_noise_that_is_there() -> None:
     state = state_of("H4")
     assert noise_of(state) == 0.0
     assert noise_of(robust_state(state, 1e-3)) == pytest.approx(1e-3)
+    assert noise_of(robust_state(state)) == pytest.approx(1e-3)
+    assert noise_of(robust_state(state_of("H4", "hf"))) == pytest.approx(2e-2)
+    assert noise_of(robust_state(state_of("H4", "hf").with_noise(1e-3))) == pytest.approx(2e-2)
     assert noise_of(robust_state(state.with_noise(0.01), 1e-3)) == pytest.approx(0.01)
     assert noise_of(robust_state(state.with_noise(0.01), 0.05)) == pytest.approx(0.05)
 

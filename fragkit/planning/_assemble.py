@@ -79,7 +79,7 @@ def plan_of_design(
     state: ReferenceState,
     design: Design,
     budget: Budget,
-    planning_noise: float,
+    planning_noise: float | None,
     *,
     seconds: float = 0.0,
 ) -> Plan:

@@ -19,7 +19,7 @@ from fragkit.planning._cost import check_state, fragment_deviations
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._exact import exact_coefficients
 from fragkit.planning._plan import Plan, PlanBound
-from fragkit.planning._robust import PLANNING_NOISE, robust_state
+from fragkit.planning._robust import robust_state
 from fragkit.planning._rotations_start import random_rotations
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.planning._whitened import NULL_VARIANCE
@@ -75,7 +75,7 @@ def optimality_gap(
     hamiltonian: Hamiltonian,
     state: ReferenceState,
     *,
-    planning_noise: float = PLANNING_NOISE,
+    planning_noise: float | None = None,
     rounds: int = 30,
     starts: int = 16,
     tolerance: float = 0.02,

@@ -13,7 +13,7 @@ from fragkit.planning._budget import Budget
 from fragkit.planning._cost import check_state
 from fragkit.planning._exact import exact_coefficients
 from fragkit.planning._plan import Plan
-from fragkit.planning._robust import PLANNING_NOISE, robust_state, share_state
+from fragkit.planning._robust import robust_state, share_state
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.states import ReferenceState
 
@@ -27,7 +27,7 @@ def reweighted(
     reference: ReferenceState | Sequence[Array] | Array,
     *,
     shifts: bool | None = None,
-    planning_noise: float = PLANNING_NOISE,
+    planning_noise: float | None = None,
     target_error: float | None = None,
     total_shots: int | None = None,
     seconds: float | None = None,

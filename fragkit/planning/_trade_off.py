@@ -14,7 +14,7 @@ from fragkit.planning._choose import Design, Settings, design_for
 from fragkit.planning._cost import check_state
 from fragkit.planning._counts import least_count
 from fragkit.planning._plan import Plan
-from fragkit.planning._robust import PLANNING_NOISE, robust_state
+from fragkit.planning._robust import robust_state
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.states import ReferenceState
 
@@ -109,7 +109,7 @@ def trade_off(
     minimum_shots: int = 10,
     time_model: TimeModel | None = None,
     shifts: bool = True,
-    planning_noise: float = PLANNING_NOISE,
+    planning_noise: float | None = None,
     rng: np.random.Generator | int | None = 0,
     tolerance: float = 5e-3,
     max_evaluations: int = 4000,

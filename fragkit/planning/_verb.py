@@ -24,7 +24,7 @@ from fragkit.planning._cost import check_state
 from fragkit.planning._counts import least_count
 from fragkit.planning._exact import EXACT
 from fragkit.planning._plan import Plan
-from fragkit.planning._robust import PLANNING_NOISE, robust_state, share_state
+from fragkit.planning._robust import robust_state, share_state
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.planning._trade_off import plan_seconds
 from fragkit.states import ReferenceState
@@ -46,7 +46,7 @@ def plan(
     minimum_shots: int = 10,
     time_model: TimeModel | None = None,
     circuit_overhead: float = 100.0,
-    planning_noise: float = PLANNING_NOISE,
+    planning_noise: float | None = None,
     starts: int = 1,
     rng: np.random.Generator | int | None = 0,
     tolerance: float = 5e-3,
@@ -94,7 +94,8 @@ def plan(
     planning_noise
         Weight of the maximally mixed state of the sector in the state that rotations and coefficients are chosen for.
         It bounds the coefficients and so keeps the plan good on states that differ from `state`; see the page on
-        planning for what it costs and saves. Noise that `state` has already counts.
+        planning for what it costs and saves. None is 1e-3, or 2e-2 for a single determinant, which must have some.
+        Noise that `state` has already counts.
     starts, rng, tolerance, max_evaluations
         Independent starts of the optimisation, their seed, the relative fall of the cost at which it ends, and its
         most evaluations. The same seed gives the same plan on the same machine.
@@ -196,7 +197,7 @@ def _as_given(
     fragments: Fragmentation | None,
     circuits: Any,
     budget: Budget,
-    planning_noise: float,
+    planning_noise: float | None,
     began: float,
 ) -> Plan:
     """Shots for fragments with the coefficients they have."""
@@ -225,7 +226,7 @@ def _knee(
     planned_on: ReferenceState,
     budget: Budget,
     settings: Settings,
-    planning_noise: float,
+    planning_noise: float | None,
     limit: int | None,
     overhead: float,
 ) -> Design:
@@ -288,7 +289,7 @@ def _cost_with_shifts(
     planned_on: ReferenceState,
     design: Design,
     budget: Budget,
-    planning_noise: float,
+    planning_noise: float | None,
 ) -> float:
     """Cost on the reference of the same rotations when symmetry shifts may be used."""
     rotations, weighting = weighted(
