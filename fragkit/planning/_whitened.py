@@ -163,14 +163,24 @@ class Information:
                     matrix = dsyrk(self.scale, basis, beta=1.0, c=matrix, lower=1, overwrite_c=1)
         self.singular = False
         diagonal = np.diag(matrix).copy()
-        try:
-            self._factor = cholesky(matrix, lower=True, overwrite_a=True, check_finite=False)
-            pivots = np.diag(self._factor) ** 2
-            self.singular = bool(np.min(pivots / diagonal) < 1e-11)
-        except np.linalg.LinAlgError:
-            self.singular = True
-            if design._basis is not None:
-                raise
+        # In the smaller basis M can still be singular to rounding, as circuits that are just enough leave directions
+        # of almost no weight; a small multiple of its scale is added then, and refinement takes out what that costs.
+        added = 0.0
+        while True:
+            try:
+                self._factor = cholesky(matrix, lower=True, overwrite_a=design._basis is None, check_finite=False)
+                pivots = np.diag(self._factor) ** 2
+                self.singular = bool(np.min(pivots / diagonal) < 1e-11)
+                break
+            except np.linalg.LinAlgError:
+                self.singular = True
+                if design._basis is None:
+                    break
+                if added > 1e-6:
+                    raise
+                more = max(99.0 * added, 1e-14)
+                matrix[np.diag_indices_from(matrix)] += more * self.scale
+                added += more
 
     def inverse(self, vectors: Array) -> Array:
         """M⁻¹ applied to vectors of the working basis."""
