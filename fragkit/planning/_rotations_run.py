@@ -137,9 +137,10 @@ class Run:
         turns = self._memory.variables - count * features
 
         def mapped(rows: Array, ratios: Array, blocks: Array) -> Array:
-            turned = rows[:, :turns].reshape(len(rows), count, -1) * ratios
+            turned = rows[:, :turns].reshape(len(rows), count, turns // count) * ratios
             mixed = np.matmul(rows[:, turns:].reshape(len(rows), count, features).transpose(1, 0, 2), blocks)
-            return np.concatenate([turned.reshape(len(rows), -1), mixed.transpose(1, 0, 2).reshape(len(rows), -1)], 1)
+            mixed = mixed.transpose(1, 0, 2).reshape(len(rows), count * features)
+            return np.concatenate([turned.reshape(len(rows), turns), mixed], axis=1)
 
         self._memory.transform(
             lambda rows: mapped(rows, ratio, forward.transpose(0, 2, 1)),
