@@ -3,6 +3,7 @@
 from typing import Protocol
 
 from fragkit.fit._point import Point
+from fragkit.fit._wording import counted
 
 
 class CountedFit(Protocol):
@@ -65,11 +66,11 @@ def smallest_count(run: CountedFit, *, guess: int) -> tuple[Point, str]:
     if reaching is None:
         last = max(tried)
         return tried[last], (
-            f"The time limit ended the search at {last} fragments, which leave a residual of {tried[last].norm:.2g} "
-            "Ha; raise `seconds` or `tol`."
+            f"The time limit ended the search at {counted(last, 'fragment')}, with a residual of "
+            f"{tried[last].norm:.2g} Ha; raise `seconds` or `tol`."
         )
     point = tried[reaching]
-    message = f"{reaching} fragments reach a residual of {point.norm:.2g} Ha"
+    message = f"A residual of {point.norm:.2g} Ha was reached with {counted(reaching, 'fragment')}"
     if failing:
         message += f"; with {failing} the best of all starts was {tried[failing].norm:.2g} Ha"
     if run.out_of_time and reaching - failing > 1:

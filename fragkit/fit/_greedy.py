@@ -12,6 +12,7 @@ from fragkit.fit._jacobi import diagonalise
 from fragkit.fit._pairs import pair_matrix
 from fragkit.fit._point import point_at
 from fragkit.fit._starts import orbital_starts, refitted
+from fragkit.fit._wording import counted
 
 Array = NDArray[np.float64]
 
@@ -86,18 +87,18 @@ class Greedy:
                 break
             point = refitted(target, longer) if self.refit else longer
             controls.update(point.rotations, point.coefficients, point.norm, sweeps)
-        made = len(point.rotations)
+        made = counted(len(point.rotations), "fragment")
         if point.norm <= tol:
-            message = f"{made} fragments reach a residual of {point.norm:.2g} Ha (tolerance {tol:.2g})."
+            message = f"A residual of {point.norm:.2g} Ha was reached with {made} (tolerance {tol:.2g} Ha)."
         elif standstill:
             message = (
-                f"After {made} fragments a further one removes nothing from the residual of {point.norm:.2g} Ha "
+                f"After {made} a further one removes nothing from the residual of {point.norm:.2g} Ha "
                 f"(tolerance {tol:.2g}); raise `tol`."
             )
         else:
             message = (
-                f"{made} fragments leave a residual of {point.norm:.2g} Ha (tolerance {tol:.2g}); raise `count`, or "
-                "use Joint, which needs fewer fragments."
+                f"A residual of {point.norm:.2g} Ha was left by {made} (tolerance {tol:.2g} Ha); raise `count`, or use "
+                "Joint, which needs fewer fragments."
             )
         return Fit(
             point.rotations,

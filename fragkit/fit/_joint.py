@@ -17,6 +17,7 @@ from fragkit.fit._pairs import pair_matrix
 from fragkit.fit._penalty import Penalty
 from fragkit.fit._point import Point, point_at
 from fragkit.fit._starts import KICK, LARGEST_TURN_OF_LARGE, TURNS, given_start, grown, low_rank_start, pruned, turned
+from fragkit.fit._wording import counted
 
 Array = NDArray[np.float64]
 Start = Literal["low rank", "greedy"]
@@ -251,9 +252,10 @@ class _Run:
     def ending(self, point: Point) -> str:
         """How the fit with a given number of fragments ended, as a sentence."""
         count = len(point.rotations)
-        starts = "1 start" if self.starts_used == 1 else f"{self.starts_used} starts"
+        fragments, starts = counted(count, "fragment"), counted(self.starts_used, "start")
         if self.reached(point):
-            return f"{count} fragments reach a residual of {point.norm:.2g} Ha (tolerance {self.tol:.2g}) in {starts}."
+            reached = f"A residual of {point.norm:.2g} Ha was reached with {fragments}"
+            return f"{reached} in {starts} (tolerance {self.tol:.2g} Ha)."
         why = {
             "seconds": "the time limit ended the fit; raise `seconds`",
             "iterations": "the last start used all its iterations; raise `max_iterations`, `count` or `starts`",
@@ -261,7 +263,10 @@ class _Run:
         }[self.last_reason]
         bound = counting_bound(self.hamiltonian.orbitals)
         hint = f" (an exact fit needs about {bound} fragments, and {bound + 1} make it easy)" if count <= bound else ""
-        return f"{count} fragments leave a residual of {point.norm:.2g} Ha after {starts}: {why}{hint}."
+        return (
+            f"A residual of {point.norm:.2g} Ha was left by {fragments} after {starts} (tolerance {self.tol:.2g} Ha): "
+            f"{why}{hint}."
+        )
 
     def result(self, point: Point, message: str) -> Fit:
         """The point as the strategy's result."""

@@ -59,11 +59,11 @@ class LowRank:
         dropped = float(np.linalg.norm(values[kept:]))
         controls.update(rotations, coefficients, dropped, 1)
         if kept == above:
-            message = f"All {above} eigenvectors with weight above {self.tol:.3g} Ha are kept."
+            message = f"Every eigenvector with weight above {self.tol:.3g} Ha is kept ({above})."
         else:
             message = (
-                f"{kept} of the {above} eigenvectors with weight above {self.tol:.3g} Ha are kept, which leaves a "
-                f"residual of {dropped:.3g} Ha; raise `count`, or use Joint, which needs fewer fragments."
+                f"Of {above} eigenvectors with weight above {self.tol:.3g} Ha the largest {kept} were kept, which "
+                f"leaves a residual of {dropped:.3g} Ha; raise `count`, or use Joint, which needs fewer fragments."
             )
         return Fit(rotations, coefficients, dropped, kept == above, message, "eigenvectors of the pair matrix", 1)
 
