@@ -12,7 +12,7 @@ from fragkit.planning._exact import exact_coefficients
 from fragkit.planning._lagrangian import Lagrangian
 from fragkit.planning._lagrangian_covariances import Covariances, cayley, tournament, variance_curvature
 from fragkit.planning._lagrangian_factor import Factor, symmetric_product
-from fragkit.planning._lagrangian_refresh import refresh
+from fragkit.planning._lagrangian_refresh import settle
 from fragkit.planning._lagrangian_restore import restore
 from fragkit.planning._rotations import optimise_rotations
 from fragkit.planning._rotations_memory import Memory
@@ -124,29 +124,49 @@ def test_gradient_of_the_lagrangian(orbitals: int, electrons: tuple[int, int], c
     np.testing.assert_allclose(again.gradient, point.gradient, rtol=0, atol=1e-12 * np.max(np.abs(point.gradient)))
 
 
-def test_refresh_is_exact_and_stationary() -> None:
-    """Its coefficients reproduce the Hamiltonian, and with settled shares no change of coefficients lowers the cost."""
+def test_settled_coefficients_are_exact_and_stationary() -> None:
+    """They reproduce the Hamiltonian, no exact change of them lowers the cost, and the convex step agrees."""
     hamiltonian = random_hamiltonian(4, (2, 2))
     design = DesignMap(hamiltonian)
     covariances = Covariances(random_state(hamiltonian), design, 0.0)
     rotations = random_rotations(9, 4, np.random.default_rng(2))
-    found = refresh(design, covariances, rotations, np.full(9, 1 / 9), iterations=60)
+    found = settle(design, covariances, rotations, np.full(9, 1 / 9), iterations=60)
     assert found.infeasibility < 1e-12
     assert np.linalg.norm(design.residual(rotations, found.coefficients)) < 1e-11
-    point = Lagrangian(design, covariances, found, 2.0).evaluate(rotations, found.scaled, found.dual)
-    assert point.cost == pytest.approx(found.cost, rel=1e-10)
-    by_coefficients = point.gradient[found.steps.size :]
-    assert np.linalg.norm(by_coefficients) < 1e-4 * np.sqrt(found.cost)
-    settled = exact_coefficients(hamiltonian, rotations, [covariances.matrix(u) for u in rotations])
-    assert found.cost == pytest.approx(settled.cost, rel=1e-4)
+    other = exact_coefficients(hamiltonian, rotations, [covariances.matrix(u) for u in rotations])
+    assert found.cost == pytest.approx(other.cost, rel=1e-4)
+    np.testing.assert_allclose(found.shares, other.shares, atol=0.01)
 
 
-def test_refresh_refuses_too_few_circuits() -> None:
+def test_restored_point() -> None:
+    """An exact point stays where it is, with multipliers that leave no gradient by the coefficients."""
+    hamiltonian = random_hamiltonian(4, (2, 2))
+    design = DesignMap(hamiltonian)
+    covariances = Covariances(random_state(hamiltonian), design, 0.0)
+    rotations = random_rotations(9, 4, np.random.default_rng(2))
+    settled = settle(design, covariances, rotations, np.full(9, 1 / 9), iterations=60)
+    base = restore(design, covariances, rotations, settled.coefficients)
+    np.testing.assert_array_equal(base.rotations, rotations)
+    assert base.cost == pytest.approx(settled.cost, rel=1e-10)
+    point = Lagrangian(design, covariances, base, 2.0).evaluate(rotations, base.scaled, base.dual)
+    assert point.cost == pytest.approx(settled.cost, rel=1e-10)
+    assert np.linalg.norm(point.multiplier_step) < 1e-9
+
+    # A disturbed point is led back to exactness by rotations and coefficients together.
+    disturbed = settled.coefficients + 1e-3 * np.random.default_rng(3).standard_normal((9, 20))
+    moved = restore(design, covariances, rotations, disturbed)
+    assert moved.infeasibility < 1e-11
+    assert np.linalg.norm(design.residual(moved.rotations, moved.coefficients)) < 1e-9
+    assert 0.0 < np.max(np.abs(moved.rotations - rotations)) < 0.1
+
+
+def test_settle_refuses_too_few_circuits() -> None:
     hamiltonian = random_hamiltonian(5, (2, 2))
     design = DesignMap(hamiltonian)
     covariances = Covariances(random_state(hamiltonian), design, 0.0)
-    with pytest.raises(InputError, match="`count` must be large enough"):
-        refresh(design, covariances, random_rotations(6, 5, np.random.default_rng(2)), np.full(6, 1 / 6))
+    rotations = random_rotations(6, 5, np.random.default_rng(2))
+    with pytest.raises(InputError, match="`count` must be larger"):
+        settle(design, covariances, rotations, np.full(6, 1 / 6), iterations=1)
 
 
 def test_curvature_of_a_variance() -> None:

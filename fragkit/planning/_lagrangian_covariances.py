@@ -1,5 +1,7 @@
 """Variances of fragments on a reference state, regularised, and their curvature along rotations."""
 
+import math
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -12,6 +14,9 @@ Array = NDArray[np.float64]
 FLOOR = 1e-9
 """Covariance of the maximally mixed state that is always added, so that states without fluctuations are usable."""
 
+SINGLE_PRECISION_DETERMINANTS = 50_000
+"""From this many determinants on CI vectors are evaluated in single precision, six digits in half the time."""
+
 DIFFERENCE = 1e-3  # radian, of the differences that give curvatures
 
 
@@ -21,6 +26,8 @@ class Covariances:
     def __init__(self, state: ReferenceState, design: DesignMap, ridge: float) -> None:
         self.state = state
         self.ridge = ridge
+        determinants = math.prod(math.comb(state.orbitals, k) for k in state.electrons)
+        self._precision = "single" if determinants > SINGLE_PRECISION_DETERMINANTS else "double"
         self._added = FLOOR * design.mixed + ridge * np.eye(len(design.mixed))
 
     def matrix(self, rotation: Array) -> Array:
@@ -29,7 +36,9 @@ class Covariances:
 
     def evaluate(self, rotations: Array, coefficients: Array) -> tuple[Array, Array, Array]:
         """As `ReferenceState.variance_and_gradient`."""
-        variances, products, gradient = self.state.variance_and_gradient(rotations, coefficients)
+        variances, products, gradient = self.state.variance_and_gradient(
+            rotations, coefficients, precision=self._precision
+        )
         added = coefficients @ self._added
         return variances + np.einsum("kf,kf->k", added, coefficients), products + added, gradient
 

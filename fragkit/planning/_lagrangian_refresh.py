@@ -1,10 +1,4 @@
-"""Exact coefficients at fixed rotations, with the scaling and the metric that the Lagrangian is built from.
-
-For weights w, M = Σ_m w_m A_m C_m⁻¹ A_mᵀ (without the shifts) gives ν = M⁻¹ h and the exact coefficients
-c_m = w_m C_m⁻¹ A_mᵀ ν of standard deviation σ_m; their cost (Σ σ)² is at most hᵀν, and σ/Σσ are better weights.
-M⁻¹ then serves as the metric of the penalty: in coefficients scaled by √w_m C_m^{-1/2} the penalty's curvature is
-a multiple of a projector, so that it adds no condition number of its own.
-"""
+"""The point a stretch of the optimisation starts from, and exact coefficients at fixed rotations."""
 
 from dataclasses import dataclass
 from typing import Any
@@ -15,7 +9,7 @@ from scipy.linalg import solve_triangular
 
 from fragkit.core import InputError
 from fragkit.planning._design_map import DesignMap
-from fragkit.planning._lagrangian_covariances import Covariances, variance_curvature
+from fragkit.planning._lagrangian_covariances import Covariances
 from fragkit.planning._lagrangian_factor import Factor, symmetric_product, working_precision
 
 Array = NDArray[np.float64]
@@ -23,7 +17,7 @@ Array = NDArray[np.float64]
 
 @dataclass(frozen=True, eq=False)
 class Refresh:
-    """Exact coefficients at some rotations and everything the next stretch of the optimisation is scaled with.
+    """Rotations with exact coefficients, and everything the next stretch of the optimisation is scaled with.
 
     Parameters
     ----------
@@ -36,7 +30,7 @@ class Refresh:
     infeasibility
         Norm of what is left of the Hamiltonian's rows over their norm.
     dual
-        (rows,) multipliers of the constraint of the cost (Σσ)²: 2ν.
+        (rows,) multipliers of the constraint for the cost (Σσ)².
     scale, unscale
         (K, F, F') and (K, F', F): c_m = scale_m z_m, z_m = unscale_m c_m for coefficients without constant parts.
     scaled
@@ -58,14 +52,27 @@ class Refresh:
     _inverse: NDArray[Any]
 
     def metric(self, rows: Array) -> Array:
-        """M⁻¹ applied to rows without the shifts."""
+        """The penalty's metric N⁻¹ applied to rows without the shifts."""
         return symmetric_product(self._inverse, rows)
 
 
-def refresh(
-    design: DesignMap, covariances: Covariances, rotations: Array, weights: Array, *, iterations: int = 1
-) -> Refresh:
-    """Solve for exact coefficients with the given weights, improving the weights `iterations` − 1 times.
+@dataclass(frozen=True, eq=False)
+class Settled:
+    """Exact coefficients (K, F) at fixed rotations, shares (K,), cost in hartree² and relative residual."""
+
+    coefficients: Array
+    shares: Array
+    cost: float
+    infeasibility: float
+
+
+def settle(
+    design: DesignMap, covariances: Covariances, rotations: Array, weights: Array, *, iterations: int
+) -> Settled:
+    """Exact coefficients at fixed rotations, with weights improved by some multiplicative updates.
+
+    For weights w, M = Σ_m w_m A_m C_m⁻¹ A_mᵀ (without the shifts) gives ν = M⁻¹ h and the exact coefficients
+    c_m = w_m C_m⁻¹ A_mᵀ ν of standard deviation σ_m; their cost (Σ σ)² is at most hᵀν, and σ/Σσ are better weights.
 
     Raises
     ------
@@ -88,8 +95,8 @@ def refresh(
         information = Factor(blocks, design.shifts.basis)
         if information.singular:
             raise InputError(
-                f"`count` must be large enough for {design.orbitals} orbitals (got {count}): generic rotations "
-                "reproduce the Hamiltonian only from about (n+1)(n+2)/4 on"
+                f"`count` must be larger for {design.orbitals} orbitals (got {count}): these rotations cannot "
+                "reproduce the Hamiltonian"
             )
         dual = design.shifts.project(information.solve(design.target))
         response = (blocks.T @ dual.astype(kind)).astype(np.float64).reshape(count, reduced)
@@ -97,30 +104,9 @@ def refresh(
         weights = deviations / deviations.sum()
     scale = np.sqrt(used)[:, None, None] * (design.features @ halves.transpose(0, 2, 1))
     coefficients, left = _refined(design, rotations, scale, response, blocks, information)
-    unscale: Array = np.asarray(np.linalg.pinv(scale), dtype=np.float64)
-    scaled = np.einsum("krf,kf->kr", unscale, coefficients)
-    deviations = np.sqrt(used) * np.linalg.norm(scaled, axis=1)
+    deviations = np.sqrt(np.maximum(covariances.evaluate(rotations, coefficients)[0], 0.0))
     total = float(deviations.sum())
-    weights = deviations / total
-
-    curvature = variance_curvature(covariances, rotations, coefficients) / weights[:, None]
-    for m, rotation in enumerate(rotations):
-        moved = information.half_solve(design.turning(rotation, coefficients[m]))
-        curvature[m] += 2.0 * np.einsum("rp,rp->p", moved, moved)
-    curvature += 2.0 * np.maximum(weights, 1e-2 / count)[:, None] * total**2
-    return Refresh(
-        rotations=rotations,
-        coefficients=coefficients,
-        shares=weights,
-        cost=total**2,
-        infeasibility=left,
-        dual=np.asarray(2.0 * dual),
-        scale=scale,
-        unscale=unscale,
-        scaled=scaled,
-        steps=1.0 / np.sqrt(curvature),
-        _inverse=information.into_inverse(),
-    )
+    return Settled(coefficients, deviations / total, total**2, left)
 
 
 def inverse_root(design: DesignMap, covariances: Covariances, rotation: Array) -> Array:

@@ -1,6 +1,7 @@
 """One descent of the Lagrangian: stretches of quasi-Newton steps between exact refreshes."""
 
 from collections.abc import Callable
+from dataclasses import replace
 from functools import cache
 
 import numpy as np
@@ -11,7 +12,7 @@ from fragkit.planning._counts import least_count
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian import Lagrangian, Point
 from fragkit.planning._lagrangian_covariances import Covariances
-from fragkit.planning._lagrangian_refresh import Refresh, refresh
+from fragkit.planning._lagrangian_refresh import Refresh, settle
 from fragkit.planning._lagrangian_restore import first_coefficients, restore
 from fragkit.planning._rotations_memory import Memory
 
@@ -39,7 +40,7 @@ class Run:
         # From `least_count` on exact coefficients exist at almost every rotation, and they make the better start.
         self._generic = count >= least_count(n)
         if self._generic:
-            coefficients = refresh(design, covariances, rotations, weights, iterations=3).coefficients
+            coefficients = settle(design, covariances, rotations, weights, iterations=2).coefficients
         else:
             coefficients = first_coefficients(design, rotations)
         self.current = self.best = restore(design, covariances, rotations, coefficients)
@@ -88,9 +89,15 @@ class Run:
     def finish(self) -> Refresh:
         """The best refresh, with coefficients of least variance for its rotations where these alone are exact."""
         if self._generic:
-            best = refresh(self._design, self._covariances, self.best.rotations, self.best.shares, iterations=3)
-            if best.cost < self.best.cost and best.infeasibility <= FEASIBLE:
-                self.best = best
+            found = settle(self._design, self._covariances, self.best.rotations, self.best.shares, iterations=2)
+            if found.cost < self.best.cost and found.infeasibility <= FEASIBLE:
+                self.best = replace(
+                    self.best,
+                    coefficients=found.coefficients,
+                    shares=found.shares,
+                    cost=found.cost,
+                    infeasibility=found.infeasibility,
+                )
         return self.best
 
     def _descend(self, lagrangian: Lagrangian, steps: int, report: Callable[[int, float], None]) -> Point:
