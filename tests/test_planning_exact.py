@@ -84,6 +84,18 @@ def test_newton_steps_and_cone_programme_agree(name: str, method: str, noise: fl
     np.testing.assert_allclose(newton.shares, cone.shares, atol=2e-3)
 
 
+@pytest.mark.parametrize("method", ["cisd", "hf"])
+def test_bad_first_guess_leads_to_the_same_place(method: str) -> None:
+    hamiltonian = molecule_hamiltonian("H4")
+    rotations = low_rank_rotations("H4")
+    matrices = covariances(reference_state(hamiltonian, method), rotations)
+    best = exact_coefficients(hamiltonian, rotations, matrices)
+    guess = np.random.default_rng(0).uniform(size=len(rotations)) ** 8
+    found = exact_coefficients(hamiltonian, rotations, matrices, start=guess)
+    assert found.converged, found.message
+    assert found.cost == pytest.approx(best.cost, rel=2e-6)
+
+
 @pytest.mark.parametrize("shifts", [True, False])
 @pytest.mark.parametrize(("name", "count"), [("LiH", 17), ("H2O", 20), ("LiH", None), ("H2O", None)])
 def test_energy_is_right_in_every_state_of_the_sector(name: str, count: int | None, shifts: bool) -> None:

@@ -21,6 +21,11 @@ from fragkit.planning._whitened import Information, WhitenedDesign
 
 Array = NDArray[np.float64]
 
+FAR = 0.6
+"""Lower bound over cost below which multiplicative updates are taken instead of Newton steps."""
+
+MOST_MULTIPLICATIVE = 12
+
 
 @dataclass(frozen=True, eq=False)
 class Weights:
@@ -59,7 +64,7 @@ def newton_weights(
     weights = np.where(active, weights, 0.0)
     slack: Array | None = None
     best: Weights | None = None
-    polish = start is None
+    cold, multiplied = start is None, 0
     for iteration in range(iterations + 1):
         information = design.information(weights)
         dual = information.inverse(design.wanted)
@@ -84,12 +89,14 @@ def newton_weights(
             report(best.cost)
         if done or iteration == iterations:
             return best
-        if polish and iteration < 2:
-            # The multiplicative update is the better step far from the solution.
+        if (cold and iteration < 2) or (bound < FAR * cost and multiplied < MOST_MULTIPLICATIVE):
+            # Far from the solution the multiplicative update is the better step: it never raises V.
             weights = weights * np.maximum(np.sqrt(sizes), 1e-2)
+            multiplied += 1
+            slack = None
             continue
         if slack is None:
-            slack = np.maximum(1.0 - sizes[active], 0.1 if polish else 0.01)
+            slack = np.maximum(1.0 - sizes[active], 0.01 if multiplied == 0 else 0.1)
         blocks = [block for block, keep in zip(design.blocks, active, strict=True) if keep]
         stepped, slack = _step(design, blocks, information, scale, weights[active], slack, sizes[active], response)
         weights = np.zeros(count)
