@@ -8,6 +8,7 @@ from plans import full_ci_state, low_rank_plan
 from fragkit.core import Fragment, InputError
 from fragkit.estimate import Counts, Estimate, estimate, simulate
 from fragkit.estimate._missing import value_range
+from fragkit.estimate._rare import missed_variance
 from fragkit.estimate._statistics import PLAN_WEIGHT, Sample, error_bar
 from fragkit.planning import Plan
 
@@ -228,3 +229,50 @@ def test_repr_is_short_and_html_is_escaped() -> None:
     assert isinstance(result, Estimate)
     assert len(repr(result)) < 200
     assert result._repr_html_().startswith("<table>")
+
+
+def rare_outcome(shots: int, predicted: float) -> float:
+    """Variance added when all shots gave both electrons in orbital 0, and the fragment's other values are 0, 1, 1, 2."""
+    fragment = Fragment.one_body(np.eye(2), [0.0, 1.0])
+    bits, numbers = np.array([[1, 0, 1, 0]], dtype=np.uint8), np.array([shots])
+    return missed_variance(fragment, bits, Sample.of(fragment.values(bits), numbers), predicted, (1, 1))
+
+
+@pytest.mark.parametrize(
+    ("shots", "deviation", "share"),
+    [
+        # σ² = 0.01: an outcome of value 1 has probability 0.01 and is expected half a time in 50 shots: all is added.
+        (50, 0.1, 1.0),
+        # The same in 5,000 shots would be seen 50 times (12 with value 2): the prediction was wrong, nothing is added.
+        (5000, 0.1, 0.0),
+        # σ² = 1e-6 from an outcome expected 5e-5 times in 50 shots: it may be missed, and a thousandth is added.
+        (50, 1e-3, 1e-3),
+        (50, 0.0, 0.0),
+    ],
+)
+def test_rare_outcomes_that_few_shots_can_miss_are_in_the_error_bar(shots: int, deviation: float, share: float) -> None:
+    assert rare_outcome(shots, deviation) == pytest.approx(share * deviation**2, rel=1e-6)
+
+
+def test_interval_with_rare_outcomes_is_wide_rather_than_wrong() -> None:
+    """n_1 of a state with occupation 0.02: 40 % of runs of 45 shots see no electron there, and still cover 0.04."""
+    fragment = Fragment.one_body(np.eye(2), [0.0, 1.0])
+    plan = Plan((fragment,), 0.0, [45], [0.2], (1, 1), "made up", 0.0, 0.0)
+    rng = np.random.default_rng(1)
+    hits = []
+    for _ in range(400):
+        both = rng.random(45) < 0.01
+        one = rng.random(45) < 0.02
+        rows = np.tile(np.array([1, 0, 1, 0], dtype=np.uint8), (45, 1))
+        rows[both] = [0, 1, 0, 1]
+        rows[one & ~both] = [0, 1, 1, 0]
+        low, high = estimate(plan, Counts.from_arrays(plan, {0: rows}, spin_order="blocked")).interval
+        hits.append(low <= 0.02 + 0.02 * 0.99 <= high)
+    assert np.mean(hits) > 0.93
+
+
+def test_seven_values_of_an_error_bar_scale_with_the_observable() -> None:
+    sample = Sample.of(np.arange(7.0), np.ones(7, dtype=np.int64))
+    double = sample.scaled(2.0)
+    assert double.mean == 2 * sample.mean
+    assert error_bar([double], np.array([2.0])).variance == pytest.approx(4 * error_bar([sample], np.ones(1)).variance)

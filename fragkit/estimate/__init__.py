@@ -9,6 +9,7 @@ from fragkit.estimate._joint import joint_plan as joint_plan
 from fragkit.estimate._measure import Measurement as Measurement
 from fragkit.estimate._measure import measure as measure
 from fragkit.estimate._measure import measure_density as measure_density
+from fragkit.estimate._moments import measured_state as measured_state
 from fragkit.estimate._observable import Observable as Observable
 from fragkit.estimate._readout import ReadoutErrors as ReadoutErrors
 from fragkit.estimate._simulate import simulate as simulate

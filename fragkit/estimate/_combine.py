@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 from fragkit.core import Fragment
 from fragkit.estimate._correction import Correction
 from fragkit.estimate._counts import Counts
+from fragkit.estimate._rare import missed_variance
 from fragkit.estimate._sector import in_sector
 from fragkit.estimate._statistics import ErrorBar, Sample, error_bar
 from fragkit.planning import Plan
@@ -68,16 +69,26 @@ class Combined:
 
 
 def combine(
-    parts: Sequence[Part], *, electrons: tuple[int, int] | None = None, correction: Correction | None = None
+    parts: Sequence[Part], electrons: tuple[int, int], *, select: bool = False, correction: Correction | None = None
 ) -> Combined:
-    """Weighted sum of the parts' values; only shots with the given electron numbers, unless None."""
+    """Weighted sum of the parts' values; with `select`, of the shots with these electron numbers only."""
     samples, predicted = [], []
-    value, extra, calibration = 0.0, [], None
+    value, extra, missed, calibration = 0.0, [], [], None
     for part in parts:
-        drawn = [
-            _sample(fragment, bits, numbers, electrons, correction).scaled(part.weight)
-            for fragment, bits, numbers in zip(part.fragments, part.counts.bits, part.counts.numbers, strict=True)
-        ]
+        drawn = []
+        for m, fragment in enumerate(part.fragments):
+            bits, numbers = part.counts.bits[m], part.counts.numbers[m]
+            if select:
+                keep = in_sector(bits, electrons)
+                if not np.all(keep):
+                    bits, numbers = bits[keep], numbers[keep]
+            values = fragment.values(bits) if correction is None else correction.values(fragment, bits)
+            sample = Sample.of(values, numbers)
+            lacking = 0.0
+            if correction is None:
+                lacking = missed_variance(fragment, bits, sample, float(part.deviations[m]), electrons)
+            drawn.append(sample.scaled(part.weight))
+            missed.append(part.weight**2 * lacking)
         samples.append(tuple(drawn))
         predicted.append(part.weight * part.deviations)
         value += part.weight * part.constant + sum(sample.mean for sample in drawn)
@@ -85,7 +96,7 @@ def combine(
         calibration = correction.variance(calibration_gradients(parts, correction))
         extra = [(calibration, correction.degrees_of_freedom)]
     flat = [sample for part in samples for sample in part]
-    bar = error_bar(flat, np.concatenate(predicted), extra=extra)
+    bar = error_bar(flat, np.concatenate(predicted), missed=missed, extra=extra)
     return Combined(float(value), bar, tuple(samples), tuple(predicted), calibration)
 
 
@@ -119,18 +130,3 @@ def split(counts: Counts, folds: int, rng: np.random.Generator) -> list[Counts]:
         )
         for k, draws in enumerate(dealt)
     ]
-
-
-def _sample(
-    fragment: Fragment,
-    bits: NDArray[np.uint8],
-    numbers: NDArray[np.int64],
-    electrons: tuple[int, int] | None,
-    correction: Correction | None,
-) -> Sample:
-    if electrons is not None:
-        keep = in_sector(bits, electrons)
-        if not np.all(keep):
-            bits, numbers = bits[keep], numbers[keep]
-    values = fragment.values(bits) if correction is None else correction.values(fragment, bits)
-    return Sample.of(values, numbers)

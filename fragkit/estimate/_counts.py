@@ -4,6 +4,7 @@ import hashlib
 import operator
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any, Literal
 
 import numpy as np
@@ -259,10 +260,12 @@ class Counts:
         """Number of spatial orbitals n."""
         return self.bits[0].shape[1] // 2
 
-    @property
+    @cached_property
     def shots(self) -> NDArray[np.int64]:
         """(circuits,) number of shots of each circuit."""
-        return np.array([np.sum(numbers) for numbers in self.numbers], dtype=np.int64)
+        totals = np.array([np.sum(numbers) for numbers in self.numbers], dtype=np.int64)
+        totals.setflags(write=False)
+        return totals
 
     @property
     def total_shots(self) -> int:

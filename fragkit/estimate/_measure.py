@@ -118,7 +118,7 @@ def measure(
         raise InputError(f"`confidence` must be between 0 and 1 (got {confidence})")
     results = []
     for observable, own in zip(listed, parts, strict=True):
-        found = combine(own, correction=data.correction)
+        found = combine(own, plan.electrons, correction=data.correction)
         half = found.bar.half_width(confidence)
         value = observable.constant + found.value
         results.append(

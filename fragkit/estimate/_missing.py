@@ -1,15 +1,13 @@
 """Circuits without shots: what the energy would lack."""
 
-from itertools import combinations
 from math import comb
 
 import numpy as np
 
 from fragkit.core import Fragment, InputError
 from fragkit.estimate._counts import Counts
+from fragkit.estimate._rare import MOST_DETERMINANTS, determinants
 from fragkit.planning import Plan
-
-_MOST_DETERMINANTS = 100_000
 
 
 def check_complete(plan: Plan, counts: Counts) -> None:
@@ -37,20 +35,9 @@ def value_range(fragment: Fragment, electrons: tuple[int, int]) -> tuple[float, 
     (-2.0, 4.0)
     """
     n, (alpha, beta) = fragment.orbitals, electrons
-    if comb(n, alpha) * comb(n, beta) <= _MOST_DETERMINANTS:
-        strings = [_strings(n, count) for count in electrons]
-        occupations = np.concatenate(
-            [np.repeat(strings[0], len(strings[1]), axis=0), np.tile(strings[1], (len(strings[0]), 1))], axis=1
-        )
-        values = fragment.values(occupations)
+    if comb(n, alpha) * comb(n, beta) <= MOST_DETERMINANTS:
+        values = fragment.values(determinants(n, electrons))
         return float(np.min(values)), float(np.max(values))
     # No feature is above 2.
     coefficients = fragment.coefficients
     return 2.0 * float(np.sum(np.minimum(coefficients, 0.0))), 2.0 * float(np.sum(np.maximum(coefficients, 0.0)))
-
-
-def _strings(orbitals: int, count: int) -> np.ndarray:
-    rows = np.zeros((comb(orbitals, count), orbitals), dtype=np.uint8)
-    for row, occupied in enumerate(combinations(range(orbitals), count)):
-        rows[row, list(occupied)] = 1
-    return rows

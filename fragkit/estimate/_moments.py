@@ -5,7 +5,7 @@ from numpy.typing import NDArray
 
 from fragkit.core import evaluate_features, pair_indices
 from fragkit.estimate._counts import Counts
-from fragkit.estimate._sector import in_sector
+from fragkit.estimate._sector import check_sector, in_sector
 from fragkit.planning import Plan
 from fragkit.states import GaussianState, ReferenceState
 
@@ -71,6 +71,24 @@ def model_state(plan: Plan, counts: Counts, reference: ReferenceState | None) ->
     from fragkit.states import mixture
 
     return mixture([(0.5, gaussian), (0.5, reference)]).with_noise(MODEL_NOISE)
+
+
+def measured_state(plan: Plan, counts: Counts, *, reference: ReferenceState | None = None) -> ReferenceState:
+    """A reference state made from counts, to plan with: new rotations, coefficients and shots for the measured state.
+
+    It is the uncorrelated state with the measured one-particle density matrices, or that and `reference` in equal
+    parts, with a little noise. Shots with other electron numbers than the plan's are left out.
+
+    Raises
+    ------
+    MismatchError
+        If the counts belong to another plan.
+    InputError
+        If most shots have other electron numbers than the plan.
+    """
+    plan.check_digest(counts.plan_digest)
+    check_sector(counts, plan.electrons, 0.5)
+    return model_state(plan, selected(counts, plan.electrons), reference)
 
 
 def shrunk_covariances(plan: Plan, counts: Counts, model: ReferenceState) -> Array:

@@ -62,22 +62,32 @@ class ErrorBar:
         return float(stats.t.ppf(0.5 + 0.5 * confidence, self.degrees_of_freedom)) * self.standard_error
 
 
-def error_bar(samples: Sequence[Sample], predicted: Array, *, extra: Sequence[tuple[float, float]] = ()) -> ErrorBar:
+def error_bar(
+    samples: Sequence[Sample],
+    predicted: Array,
+    *,
+    missed: Sequence[float] | None = None,
+    extra: Sequence[tuple[float, float]] = (),
+) -> ErrorBar:
     """Error bar of the sum of the samples' means.
 
     The observed variance V = Σ s²/N is known with ν = 2V²/Var(V) degrees of freedom, where Var(V) comes from the
     fourth moments (Welch and Satterthwaite's rule is the case of normal values). Where that is little, as with few
     shots and rare outcomes, V is averaged with the variance that the plan predicted, which counts as `PLAN_WEIGHT`
-    degrees of freedom; but the result is never below what was observed. `extra` are other independent contributions
-    (variance, degrees of freedom).
+    degrees of freedom; but the result is never below what was observed. `missed` is variance of one shot that was not
+    seen (see `missed_variance`) and counts as a prediction. `extra` are other independent contributions (variance,
+    degrees of freedom).
     """
     observed = expected = uncertainty = 0.0
-    for sample, deviation in zip(samples, predicted, strict=True):
+    unseen = [0.0] * len(samples) if missed is None else missed
+    for sample, deviation, lacking in zip(samples, predicted, unseen, strict=True):
         expectation = deviation**2 / sample.shots
         # One shot shows no deviation; then the plan's is all there is.
         variance = sample.variance / sample.shots if sample.shots > 1 else expectation
         spread = sample.error_of_variance / sample.shots if sample.shots > 1 else np.sqrt(2.0) * expectation
-        observed, expected, uncertainty = observed + variance, expected + expectation, uncertainty + spread**2
+        lacking = lacking / sample.shots
+        observed, expected = observed + variance + lacking, expected + expectation
+        uncertainty += spread**2 + 2.0 / PLAN_WEIGHT * lacking**2
     # At most as many degrees of freedom as a double can tell from infinity here.
     freedom = min(2.0 * observed**2 / uncertainty, 1e9) if uncertainty > 0.0 else (1e9 if observed > 0.0 else 0.0)
     joined = (freedom * observed + PLAN_WEIGHT * expected) / (freedom + PLAN_WEIGHT)

@@ -121,9 +121,9 @@ def estimate_parts(
     if select:
         check_every_circuit_keeps_shots(counts, kept, plan.electrons)
 
-    whole = combine(parts, correction=correction)
+    whole = combine(parts, plan.electrons, correction=correction)
     discards = select and bool(np.any(kept < counts.shots))
-    used = combine(parts, electrons=plan.electrons) if discards else whole
+    used = combine(parts, plan.electrons, select=True) if discards else whole
     leak = None
     if correction is not None:
         leak, consistency = _sector_leak(plan, counts, correction), None
