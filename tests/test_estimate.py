@@ -232,7 +232,7 @@ def test_repr_is_short_and_html_is_escaped() -> None:
 
 
 def rare_outcome(shots: int, predicted: float) -> float:
-    """Variance added when all shots gave both electrons in orbital 0, and the fragment's other values are 0, 1, 1, 2."""
+    """Variance added when all shots had both electrons in orbital 0; values of the determinants are 0, 1, 1, 2."""
     fragment = Fragment.one_body(np.eye(2), [0.0, 1.0])
     bits, numbers = np.array([[1, 0, 1, 0]], dtype=np.uint8), np.array([shots])
     return missed_variance(fragment, bits, Sample.of(fragment.values(bits), numbers), predicted, (1, 1))
