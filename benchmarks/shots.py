@@ -32,12 +32,13 @@ from fragkit.fit import fragment
 from fragkit.pauli import pauli_costs
 from fragkit.planning import exact_coefficients, optimality_gap, plan, plan_cost, reweighted, trade_off
 from fragkit.planning._counts import least_count
+from fragkit.planning._robust import DETERMINANT_NOISE, PLANNING_NOISE
 from fragkit.states import ReferenceState, reference_state
 
 sys.path.insert(0, str(Path(__file__).parents[1] / "tests"))
 from molecules import full_ci, molecule_hamiltonian
 
-CIRCUITS = {"H2": (5,), "H4": (10,), "H6": (16,), "LiH": (18,), "BeH2": (21,), "H2O": (20,), "NH3": (25,), "N2": (38,)}
+CIRCUITS = {"H2": (5,), "H4": (10,), "H6": (16,), "LiH": (18,), "BeH2": (21,), "H2O": (12, 20), "NH3": (25,), "N2": (38,)}
 QUICK = ("H2", "H4", "LiH")
 # Rotations for a figure on the full CI state keep less noise than the robust default: see docs/planning.md.
 SHARP_NOISE = 3e-4
@@ -149,8 +150,8 @@ def noise_part(name: str, circuits: int) -> None:
     for noise in (1e-4, 3e-4, 1e-3, 3e-3, 1e-2):
         show("CISD", noise, plan(hamiltonian, cisd, circuits=circuits, planning_noise=noise, minimum_shots=1))
     from_determinant = plan(hamiltonian, hf, circuits=circuits, minimum_shots=1)
-    show("HF", 1e-3, from_determinant)
-    show("HF, then CISD", 1e-3, reweighted(from_determinant, hamiltonian, cisd, minimum_shots=1))
+    show("HF", DETERMINANT_NOISE, from_determinant)
+    show("HF, then CISD", PLANNING_NOISE, reweighted(from_determinant, hamiltonian, cisd, minimum_shots=1))
 
 
 def gap_part(names: list[str]) -> None:
@@ -183,7 +184,7 @@ def main() -> None:
         return
     if options.part == "noise":
         for name in names if options.molecules else ("H4",) if options.quick else ("H2O",):
-            noise_part(name, CIRCUITS[name][0])
+            noise_part(name, CIRCUITS[name][-1])
         return
     if options.part == "gap":
         gap_part(list(names) if options.molecules else ["H4"] if options.quick else ["H4", "LiH", "H2O"])
