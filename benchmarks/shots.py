@@ -38,9 +38,17 @@ from fragkit.states import ReferenceState, reference_state
 sys.path.insert(0, str(Path(__file__).parents[1] / "tests"))
 from molecules import full_ci, molecule_hamiltonian
 
-CIRCUITS = {"H2": (5,), "H4": (10,), "H6": (16,), "LiH": (18,), "BeH2": (21,), "H2O": (12, 20), "NH3": (25,), "N2": (38,)}
+CIRCUITS = {
+    "H2": (5,),
+    "H4": (10,),
+    "H6": (16,),
+    "LiH": (18,),
+    "BeH2": (21,),
+    "H2O": (12, 20),
+    "NH3": (25,),
+    "N2": (38,),
+}
 QUICK = ("H2", "H4", "LiH")
-# Rotations for a figure on the full CI state keep less noise than the robust default: see docs/planning.md.
 SHARP_NOISE = 3e-4
 
 
