@@ -82,7 +82,7 @@ def curve(quick: bool, figure: str | None) -> None:
         shown = range(1, most + 1, 2 if name == "N2" else 1)
         rows = {}
         for count in shown:
-            joint = fragment(hamiltonian, Joint(count=count, tol=1e-8, starts=1 if count < most - 1 else 4))
+            joint = fragment(hamiltonian, Joint(count=count, tol=1e-8, starts=3))
             rows[count] = (
                 fragment(hamiltonian, LowRank(count=count)).residual_norm,
                 fragment(hamiltonian, Greedy(count=count, tol=1e-12)).residual_norm,

@@ -16,7 +16,17 @@ from fragkit.fit._levenberg import MatrixFreeSolver, Outcome, levenberg_marquard
 from fragkit.fit._pairs import pair_matrix
 from fragkit.fit._penalty import Penalty
 from fragkit.fit._point import Point, point_at
-from fragkit.fit._starts import KICK, LARGEST_TURN_OF_LARGE, TURNS, given_start, grown, low_rank_start, pruned, turned
+from fragkit.fit._starts import (
+    FIRST_TURN,
+    FIRST_TURN_OF_LARGE,
+    KICK,
+    given_start,
+    grown,
+    low_rank_start,
+    pruned,
+    random_turn,
+    turned,
+)
 from fragkit.fit._wording import counted
 
 Array = NDArray[np.float64]
@@ -49,9 +59,9 @@ class Joint:
     relative
         What `tol` means.
     start
-        "low rank": the largest rank-one fragments, turned at random; "greedy": those of `Greedy`; or a
-        Fragmentation of the same Hamiltonian, which is grown or pruned to `count`. Further starts are turned at
-        random.
+        Where the first start begins. "low rank": the largest rank-one fragments, turned at random; "greedy": those of
+        `Greedy`; or a Fragmentation of the same Hamiltonian, which is grown or pruned to `count`. Further starts are
+        low-rank and greedy ones, turned or found at random.
     starts
         Most starts for one number of fragments; the first that reaches `tol` ends the fit. From the fourth on, every
         other one leaves the best point found so far. At the counting bound tens of starts may be needed.
@@ -180,30 +190,33 @@ class _Run:
         return best
 
     def _start(self, count: int, number: int, warm: Point | None, best: Point | None) -> Point:
-        rng, strategy = self.controls.rng, self.strategy
+        """Where start `number` begins: the one asked for, then low rank and greedy in turn, and the best so far."""
+        rng = self.controls.rng
+        large = self._method_for(count) == "matrix-free"
+        if number == 0:
+            return self._first_start(count, warm, large)
         if best is not None and number >= 3 and number % 2 == 1:
             return point_at(self.target, turned(best.rotations, KICK, rng), best.coefficients)
+        if number % 4 == 2 and not large:
+            return self._greedy_start(count, starts=2)
+        rotations, coefficients = low_rank_start(self.hamiltonian, count)
+        return point_at(self.target, turned(rotations, random_turn(rng), rng), coefficients)
+
+    def _first_start(self, count: int, warm: Point | None, large: bool) -> Point:
+        start, rng = self.strategy.start, self.controls.rng
+        if warm is None and isinstance(start, Fragmentation):
+            warm = point_at(self.target, *given_start(start.fragments, self.hamiltonian.orbitals))
         if warm is not None:
-            if number == 0:
-                return grown(self.target, pruned(self.target, warm, count), count, rng)
-            number -= 1
-        amount = TURNS[number % len(TURNS)]
-        if self._method_for(count) == "matrix-free":
-            amount = min(amount, LARGEST_TURN_OF_LARGE)
-        if isinstance(strategy.start, Fragmentation):
-            rotations, coefficients = given_start(strategy.start.fragments, self.hamiltonian.orbitals)
-            point = point_at(self.target, rotations, coefficients)
-            point = grown(self.target, pruned(self.target, point, count), count, rng)
-        elif strategy.start == "greedy":
-            fit = Greedy(count=count, tol=1e-12).fit(self.hamiltonian, Controls(rng=rng))
-            point = point_at(self.target, fit.rotations, fit.coefficients)
-            point = grown(self.target, point, count, rng)
-        else:
-            rotations, coefficients = low_rank_start(self.hamiltonian, count)
-            return point_at(self.target, turned(rotations, amount, rng), coefficients)
-        if number == 0:
-            return point
-        return point_at(self.target, turned(point.rotations, amount, rng), point.coefficients)
+            return grown(self.target, pruned(self.target, warm, count), count, rng)
+        if start == "greedy":
+            return self._greedy_start(count, starts=8)
+        rotations, coefficients = low_rank_start(self.hamiltonian, count)
+        return point_at(self.target, turned(rotations, FIRST_TURN_OF_LARGE if large else FIRST_TURN, rng), coefficients)
+
+    def _greedy_start(self, count: int, *, starts: int) -> Point:
+        rng = self.controls.rng
+        fit = Greedy(count=count, tol=1e-12, starts=starts).fit(self.hamiltonian, Controls(rng=rng))
+        return grown(self.target, point_at(self.target, fit.rotations, fit.coefficients), count, rng)
 
     def _method_for(self, count: int) -> Literal["dense", "matrix-free"]:
         if self.strategy.method != "auto":

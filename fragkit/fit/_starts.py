@@ -13,13 +13,18 @@ from fragkit.fit._point import Point, adjoint, derivative, point_at
 
 Array = NDArray[np.float64]
 
-# Radian, one start after the other. A large turn leaves the symmetry and the valley of the low-rank start; a small one
-# keeps its head start, which is worth most at the counting bound and for large molecules.
-TURNS = (0.1, 0.02, 0.05, 0.2, 0.01, 0.5, 0.05)
-LARGEST_TURN_OF_LARGE = 0.05
+# Radian. A large turn leaves the symmetry and the valley of the low-rank start; a small one keeps its head start, which
+# is worth most for large molecules.
+FIRST_TURN = 0.1
+FIRST_TURN_OF_LARGE = 0.05
 # From the fourth start on every other one leaves the best point by a turn of this size: smaller ones were seen to fall
 # back to the same minimum.
 KICK = 0.1
+
+
+def random_turn(rng: np.random.Generator) -> float:
+    """Size of the turn of a further start, 0.01 to 0.3 radian, each power of ten as likely."""
+    return float(10.0 ** rng.uniform(-2.0, -0.5))
 
 
 def low_rank_start(hamiltonian: Hamiltonian, count: int) -> tuple[Array, Array]:
