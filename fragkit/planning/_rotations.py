@@ -12,7 +12,7 @@ from fragkit.core import Hamiltonian, InputError, as_count, as_positive
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian_covariances import Covariances
 from fragkit.planning._rotations_file import RotationsFile
-from fragkit.planning._rotations_run import Run
+from fragkit.planning._rotations_run import FEASIBLE, Run
 from fragkit.planning._rotations_start import starting_rotations
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.states import ReferenceState
@@ -83,7 +83,7 @@ def optimise_rotations(
 
     Minimises over K rotations and their coefficients together, by an augmented Lagrangian with quasi-Newton steps on
     the orthogonal group. Shot shares and operators that are constant in the sector are eliminated in closed form.
-    Every 60 steps or so (120 for many orbitals) the coefficients are solved for exactly; the best of these is
+    Every hundred steps or so rotations and coefficients are led back to exactness; the best of these points is
     returned. The problem has many local minima, which differ by some per cent.
 
     Parameters
@@ -94,7 +94,9 @@ def optimise_rotations(
         Whose variances count. A little noise in it (1e-3 is a robust choice) keeps the plan good on states that
         differ from it.
     count
-        Number of circuits K, at least (n+1)(n+2)/4 (`least_count`); two more is a good choice.
+        Number of circuits K. Two more than the (n+1)(n+2)/4 that generic rotations need (`least_count`) is a good
+        choice. Down to about two thirds of it rotations can be kept where they reproduce the Hamiltonian, at a cost
+        that grows as they lose freedom.
     start
         None for random rotations, "low-rank", a `Fragmentation`, or rotations (at most K, n, n); missing ones are
         random.
@@ -217,7 +219,7 @@ def optimise_rotations(
         infeasibility=best.infeasibility,
         evaluations=total,
         seconds=time.perf_counter() - began,
-        converged=settled,
+        converged=settled and best.infeasibility <= FEASIBLE,
         message=_message(runs[0], total, settled, interrupted, tolerance),
     )
 
@@ -228,6 +230,11 @@ def _advance(run: Run, evaluations: int, bar: "_Bar") -> None:
 
 
 def _message(run: Run, evaluations: int, settled: bool, interrupted: bool, tolerance: float) -> str:
+    if run.best.infeasibility > FEASIBLE:
+        return (
+            f"The Hamiltonian is not reproduced: a relative residual of {run.best.infeasibility:.2g} is left after "
+            f"{evaluations} evaluations; use more circuits."
+        )
     if settled:
         return f"The cost fell by less than {tolerance:g} in the last {WINDOW} evaluations, {evaluations} in all."
     fall = run.recent_fall(WINDOW)

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 from threadpoolctl import ThreadpoolController
 
+from fragkit.core import InputError
 from fragkit.planning._counts import least_count
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian import Lagrangian, Point
@@ -53,7 +54,7 @@ class Run:
     @property
     def natural_steps(self) -> int:
         """Steps until the next refresh: few while the scaling changes fast, more where a refresh is dear."""
-        longest = 80 if self._design.space.size < SMALL else 120
+        longest = 80 if self._design.space.size < SMALL else 160
         if len(self.history) > 1 and self.history[-1][1] > 0.98 * self.history[-2][1]:
             longest *= 2
         return min(longest, 20 + 15 * (len(self.history) - 1))
@@ -71,7 +72,14 @@ class Run:
             end = self._descend(lagrangian, steps, report)
         rotations = _orthonormal(end.rotations)
         coefficients = np.einsum("kfr,kr->kf", self.current.scale, end.scaled)
-        new = restore(self._design, self._covariances, rotations, coefficients)
+        try:
+            new = restore(self._design, self._covariances, rotations, coefficients)
+        except InputError:
+            # With very few circuits one that falls out of use takes the last freedom with it.
+            if self.best.infeasibility > FEASIBLE:
+                raise
+            self.stuck = True
+            return
         self.history.append((self.evaluations, new.cost))
         worse = new.cost > 1.02 * self.best.cost or new.infeasibility > FEASIBLE
         if worse and self.best.infeasibility <= FEASIBLE:
