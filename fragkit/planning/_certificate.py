@@ -115,6 +115,18 @@ def optimality_gap(
     -----
     The inner maximum is found by local searches from many starting points, so the bound is not proved: a maximum that
     was missed would lower it. More `starts` make that less likely.
+
+    Examples
+    --------
+    >>> from fragkit.planning import plan
+    >>> from fragkit.states import reference_state
+    >>> on_site = np.zeros((2, 2, 2, 2))
+    >>> on_site[0, 0, 0, 0] = on_site[1, 1, 1, 1] = 4.0
+    >>> ham = Hamiltonian(0.0, np.array([[0.0, -1.0], [-1.0, 0.0]]), on_site, electrons=(1, 1))
+    >>> state = reference_state(ham, "fci", noise=0.01)
+    >>> gap = optimality_gap(plan(ham, state), ham, state, rounds=5)
+    >>> 0 < gap.quantum_limit <= gap.lower_bound <= gap.cost
+    True
     """
     if not isinstance(plan, Plan):
         raise InputError(f"`plan` must be a Plan (got {type(plan).__name__}); make one with fragkit.plan")
