@@ -124,7 +124,7 @@ def optimality_gap(
     >>> on_site[0, 0, 0, 0] = on_site[1, 1, 1, 1] = 4.0
     >>> ham = Hamiltonian(0.0, np.array([[0.0, -1.0], [-1.0, 0.0]]), on_site, electrons=(1, 1))
     >>> state = reference_state(ham, "fci", noise=0.01)
-    >>> gap = optimality_gap(plan(ham, state), ham, state, rounds=5)
+    >>> gap = optimality_gap(plan(ham, state, max_evaluations=60), ham, state, rounds=2, starts=4)
     >>> 0 < gap.quantum_limit <= gap.lower_bound <= gap.cost
     True
     """
@@ -195,8 +195,8 @@ def optimality_gap(
         )
     return OptimalityGap(
         cost=cost,
-        lower_bound=bound,
-        enlarged_cost=enlarged,
+        lower_bound=float(bound),
+        enlarged_cost=float(enlarged),
         enlarged_circuits=len(rotations),
         quantum_limit=planned_on.variance(hamiltonian),
         state=planned_on.description,

@@ -145,9 +145,9 @@ def trade_off(
     >>> on_site = np.zeros((2, 2, 2, 2))
     >>> on_site[0, 0, 0, 0] = on_site[1, 1, 1, 1] = 4.0
     >>> ham = Hamiltonian(0.0, np.array([[0.0, -1.0], [-1.0, 0.0]]), on_site, electrons=(1, 1))
-    >>> curve = trade_off(ham, reference_state(ham, "fci"), [3, 4])
-    >>> curve.circuits
-    array([3, 4])
+    >>> curve = trade_off(ham, reference_state(ham, "fci"), [3, 4], max_evaluations=60)
+    >>> len(curve)
+    2
     """
     check_state(state, hamiltonian.orbitals, hamiltonian.electrons)
     fewest = least_count(hamiltonian.orbitals)
