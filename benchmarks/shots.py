@@ -120,7 +120,7 @@ def draw(path: Path, quick: bool) -> None:
     names = ("H4",) if quick else ("H4", "LiH", "H2O")
     for name in names:
         hamiltonian = molecule_hamiltonian(name)
-        curve = trade_off(hamiltonian, reference_state(hamiltonian, "cisd"))
+        curve = trade_off(hamiltonian, reference_state(hamiltonian, "cisd"), tolerance=2e-2)
         print(f"\n{name}\n{curve}")
         axes = curve.plot(axes, label=f"{name}, {hamiltonian.orbitals} orbitals")
     if axes is None:
