@@ -197,7 +197,7 @@ class _Run:
             return self._first_start(count, warm, large)
         if best is not None and number >= 3 and number % 2 == 1:
             return point_at(self.target, turned(best.rotations, KICK, rng), best.coefficients)
-        if number % 4 == 2 and not large:
+        if (number == 1 or number % 4 == 0) and not large:
             return self._greedy_start(count, starts=2)
         rotations, coefficients = low_rank_start(self.hamiltonian, count)
         return point_at(self.target, turned(rotations, random_turn(rng), rng), coefficients)
