@@ -91,32 +91,40 @@ def coverage(repetitions: int, figure: bool, molecules: tuple[str, ...]) -> None
     print(f"{'molecule':9}{'plan':12}{'shots':>7}{'coverage %':>12}{'bias / s.e.':>13}{'spread/error':>14}")
     results: dict[tuple[str, str], list[tuple[int, float]]] = {}
     for name in molecules:
-        exact = full_ci(name)[0]
         for kind, maker in (("low rank", low_rank), ("optimised", optimised)):
             made = maker(name)
-            device = Device(name, rotations(made))
             for shots in (20, 50, 500, 5000):
-                rng = np.random.default_rng([shots, len(made)])
-                found = [estimate(made, device.run(made, shots, rng)) for _ in range(repetitions)]
-                hits = np.mean([e.interval[0] <= exact <= e.interval[1] for e in found])
-                off, bars = deviations(found, exact)
-                print(
-                    f"{name:9}{kind:12}{shots:7d}{100 * hits:12.1f}{off.mean() / off.std() * repetitions**0.5:13.2f}"
-                    f"{off.std() / np.sqrt(np.mean(bars**2)):14.3f}",
-                    flush=True,
-                )
-                results.setdefault((name, kind), []).append((shots, 100 * float(hits)))
+                hits = coverage_case(name, kind, made, shots, repetitions)
+                results.setdefault((name, kind), []).append((shots, hits))
     if figure:
-        axes = new_axes()
-        for (name, kind), points in results.items():
-            x, y = zip(*points, strict=True)
-            axes.semilogx(x, y, "o-" if kind == "low rank" else "s--", label=f"{name}, {kind}")
-        axes.axhspan(94, 96, color="0.85")
-        axes.set_xlabel("shots of each circuit")
-        axes.set_ylabel("intervals that hold the exact energy / %")
-        axes.set_ylim(90, 100)
-        axes.legend(fontsize=7, ncols=2)
-        save(axes, "coverage.png")
+        coverage_figure(results)
+
+
+def coverage_case(name: str, kind: str, made: Plan, shots: int, repetitions: int) -> float:
+    """Percent of intervals that hold the exact energy; prints a row."""
+    exact, device, rng = full_ci(name)[0], Device(name, rotations(made)), np.random.default_rng([shots, len(made)])
+    found = [estimate(made, device.run(made, shots, rng)) for _ in range(repetitions)]
+    hits = 100 * float(np.mean([e.interval[0] <= exact <= e.interval[1] for e in found]))
+    off, bars = deviations(found, exact)
+    print(
+        f"{name:9}{kind:12}{shots:7d}{hits:12.1f}{off.mean() / off.std() * repetitions**0.5:13.2f}"
+        f"{off.std() / np.sqrt(np.mean(bars**2)):14.3f}",
+        flush=True,
+    )
+    return hits
+
+
+def coverage_figure(results: dict[tuple[str, str], list[tuple[int, float]]]) -> None:
+    axes = new_axes()
+    for (name, kind), points in results.items():
+        x, y = zip(*points, strict=True)
+        axes.semilogx(x, y, "o-" if kind == "low rank" else "s--", label=f"{name}, {kind}")
+    axes.axhspan(94, 96, color="0.85")
+    axes.set_xlabel("shots of each circuit")
+    axes.set_ylabel("intervals that hold the exact energy / %")
+    axes.set_ylim(90, 100.5)
+    axes.legend(fontsize=7, ncols=2)
+    save(axes, "coverage.png")
 
 
 def sd(repetitions: int) -> float:

@@ -73,7 +73,7 @@ def combine(
 ) -> Combined:
     """Weighted sum of the parts' values; with `select`, of the shots with these electron numbers only."""
     samples, predicted = [], []
-    value, extra, missed, calibration = 0.0, [], [], None
+    value, extra, believed, missed, calibration = 0.0, [], [], [], None
     for part in parts:
         drawn = []
         for m, fragment in enumerate(part.fragments):
@@ -84,11 +84,12 @@ def combine(
                     bits, numbers = bits[keep], numbers[keep]
             values = fragment.values(bits) if correction is None else correction.values(fragment, bits)
             sample = Sample.of(values, numbers)
-            lacking = 0.0
-            if correction is None:
-                lacking = missed_variance(fragment, bits, sample, float(part.deviations[m]), electrons)
+            deviation = float(part.deviations[m])
+            lacking = None if correction else missed_variance(fragment, bits, sample, deviation, electrons)
+            # A prediction that the data contradict counts only as far as outcomes may have been missed.
+            believed.append(part.weight * (deviation if lacking is None else np.sqrt(sample.variance + lacking)))
+            missed.append(part.weight**2 * (lacking or 0.0))
             drawn.append(sample.scaled(part.weight))
-            missed.append(part.weight**2 * lacking)
         samples.append(tuple(drawn))
         predicted.append(part.weight * part.deviations)
         value += part.weight * part.constant + sum(sample.mean for sample in drawn)
@@ -96,7 +97,7 @@ def combine(
         calibration = correction.variance(calibration_gradients(parts, correction))
         extra = [(calibration, correction.degrees_of_freedom)]
     flat = [sample for part in samples for sample in part]
-    bar = error_bar(flat, np.concatenate(predicted), missed=missed, extra=extra)
+    bar = error_bar(flat, np.array(believed), missed=missed, extra=extra)
     return Combined(float(value), bar, tuple(samples), tuple(predicted), calibration)
 
 

@@ -22,8 +22,8 @@ _EXPECTED = 0.05
 
 def missed_variance(
     fragment: Fragment, bits: Bits, sample: Sample, predicted: float, electrons: tuple[int, int]
-) -> float:
-    """Variance of one shot, in hartree², that outcomes which were not seen may add.
+) -> float | None:
+    """Variance of one shot, in hartree², that outcomes which were not seen may add; None if prediction and data agree.
 
     An observed variance far below the predicted one means that the state is quieter than the reference, or that the
     shots missed rare outcomes of large value. An outcome at distance Δ from the mean has probability L/Δ² if it is to
@@ -32,11 +32,11 @@ def missed_variance(
     expected far less than once in all the shots count in proportion, since they hardly ever matter.
     """
     if sample.shots < 2 or predicted == 0.0:
-        return 0.0
+        return None
     kurtosis = max(sample.fourth / sample.variance**2 if sample.variance > 0.0 else 3.0, 3.0)
     chance = 1.0 - 2.5 * np.sqrt((kurtosis - 1.0) / sample.shots)
     if sample.variance >= max(chance, 0.25) * predicted**2:
-        return 0.0
+        return None
     lack = predicted**2 - sample.variance
     n = fragment.orbitals
     if comb(n, electrons[0]) * comb(n, electrons[1]) > MOST_DETERMINANTS:
