@@ -53,6 +53,13 @@ def test_ammonia_in_twelve_fragments() -> None:
     assert "Cholesky" in fragments.method
 
 
+@pytest.mark.parametrize(("name", "count"), [("LiH", 7), ("H2O", 9)])
+def test_several_starts_reach_the_counting_bound(name: str, count: int) -> None:
+    fragments = fragment(molecule_hamiltonian(name), Joint(count=count, tol=1e-6, starts=30))
+    assert fragments.converged
+    assert np.linalg.norm(tensor_of(fragments) - molecule_hamiltonian(name).two_body) <= 1.001e-6
+
+
 @pytest.mark.parametrize("one_body", ["separate", "absorbed"])
 @pytest.mark.parametrize("strategy", [LowRank(), Joint(count=8), Greedy(tol=1e-8)], ids=lambda s: type(s).__name__)
 def test_the_sum_of_exact_fragments_has_the_full_ci_energy(strategy: Strategy, one_body: str) -> None:
