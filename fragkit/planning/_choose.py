@@ -47,6 +47,7 @@ class Design:
     converged: bool
     message: str
     method: str
+    interrupted: bool = False
 
 
 def default_count(orbitals: int, maximum: int | None = None) -> int:
@@ -140,6 +141,7 @@ def design_for(
         found.converged and weighting.converged,
         found.message if weighting.converged else f"{found.message} {weighting.message}",
         "optimised rotations, least-variance coefficients",
+        interrupted=found.message.startswith("Interrupted"),
     )
 
 

@@ -118,7 +118,8 @@ def trade_off(
     """Plans for several numbers of circuits, each started from its neighbours.
 
     Going up, random rotations are added to those found for the number before; going down again, the circuits with the
-    fewest shots are dropped from those of the number after, and the better of the two results is kept.
+    fewest shots are dropped from those of the number after, and the better of the two results is kept. Ctrl-C ends the
+    search and returns the plans that there are.
 
     Parameters
     ----------
@@ -163,7 +164,11 @@ def trade_off(
     for count in numbers:
         warm = designs[-1].rotations if designs and len(designs[-1].rotations) <= count else None
         designs.append(design_for(hamiltonian, planned_on, count, settings, start=warm))
-    for k in range(len(numbers) - 2, -1, -1):
+        if designs[-1].interrupted:
+            break
+    for k in range(len(designs) - 2, -1, -1):
+        if designs[-1].interrupted:
+            break
         shares = designs[k + 1].weighting.shares
         heavy = np.sort(np.argsort(-shares)[: numbers[k]])
         again = design_for(hamiltonian, planned_on, numbers[k], settings, start=designs[k + 1].rotations[heavy])
@@ -171,6 +176,8 @@ def trade_off(
             again.weighting.cost < designs[k].weighting.cost
         ):
             designs[k] = again
+        if again.interrupted:
+            break
     plans = tuple(plan_of_design(hamiltonian, state, design, budget, planning_noise) for design in designs)
     return TradeOff(plans, plan_seconds(plans, budget))
 

@@ -166,6 +166,8 @@ def plan(
     limit = None if maximum_circuits is None else as_count(maximum_circuits, "maximum_circuits", minimum=1)
     if isinstance(circuits, str) and fragments is not None:
         raise InputError(f"`circuits` must be a whole number or None with `fragments` (got {circuits!r})")
+    if circuits == "auto" and checkpoint is not None:
+        raise InputError("`checkpoint` must be left out with circuits='auto', which makes many optimisations")
     if circuits == "auto":
         overhead = float(circuit_overhead)
         if not 0.0 <= overhead < np.inf:
@@ -233,34 +235,35 @@ def _knee(
     """The number of circuits from which on a further circuit costs more than the shots it saves."""
     fewest = least_count(hamiltonian.orbitals)
     best: Design | None = None
-    least = np.inf
+    least, stopped = np.inf, False
 
     def better(count: int, warm: Any) -> bool:
         """Try a number of circuits; keep it if it spends less than the best so far."""
-        nonlocal best, least
+        nonlocal best, least, stopped
         try:
             design = design_for(hamiltonian, planned_on, count, settings, start=warm)
+            made = plan_of_design(hamiltonian, state, design, budget, planning_noise)
         except InputError:
             if best is None:
                 raise
-            return False  # so few circuits cannot be exact
-        spent = _spent(plan_of_design(hamiltonian, state, design, budget, planning_noise), budget, overhead)
+            return False  # too few circuits to be exact, or too many for the budget
+        stopped = design.interrupted
+        spent = _spent(made, budget, overhead)
         if best is not None and (spent >= least or design.weighting.relative_residual > EXACT):
             return False
         best, least = design, spent
-        return True
+        return not stopped
 
     count = fewest if limit is None else min(fewest, limit)
     first = count
-    better(count, None)
+    going = better(count, None)
     step = 2
-    while best is not None and (limit is None or count + step <= limit):
+    while going and best is not None and (limit is None or count + step <= limit):
         count += step
-        if not better(count, best.rotations):
-            break
+        going = better(count, best.rotations)
         step = max(2, round(0.15 * count))
     # Fewer than generic rotations allow: worth a look when more are not better. A third of that number is never exact.
-    while best is not None and len(best.rotations) <= first and first > 2 + fewest // 3:
+    while best is not None and not stopped and len(best.rotations) <= first and first > 2 + fewest // 3:
         first -= max(1, round(0.1 * fewest))
         heavy = np.sort(np.argsort(-best.weighting.shares)[:first])
         if not better(first, best.rotations[heavy]):
