@@ -13,7 +13,7 @@ from fragkit.planning._choose import Design
 from fragkit.planning._cost import fragment_deviations
 from fragkit.planning._exact import Weighting
 from fragkit.planning._plan import Plan, PlanBound
-from fragkit.planning._robust import share_state
+from fragkit.planning._robust import noise_of, robust_state, share_state
 from fragkit.states import DeterminantState, ReferenceState
 
 Array = NDArray[np.float64]
@@ -93,7 +93,7 @@ def plan_of_design(
         **weighting_promises(design.weighting),
         converged=design.converged,
         message=design.message,
-        method=design.method,
+        method=f"{design.method}, planning noise {noise_of(robust_state(state, planning_noise)):g}",
         seconds=seconds,
     )
 
