@@ -12,6 +12,8 @@ from fragkit.planning._plan import CHEMICAL_ACCURACY as CHEMICAL_ACCURACY
 from fragkit.planning._plan import Plan as Plan
 from fragkit.planning._plan import PlanBound as PlanBound
 from fragkit.planning._reweighted import reweighted as reweighted
+from fragkit.planning._rotations import RotationDesign as RotationDesign
+from fragkit.planning._rotations import optimise_rotations as optimise_rotations
 from fragkit.planning._shifts import no_shifts as no_shifts
 from fragkit.planning._shifts import sector_shifts as sector_shifts
 from fragkit.planning._trade_off import TradeOff as TradeOff
