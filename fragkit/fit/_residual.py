@@ -114,11 +114,13 @@ def residual_and_gradient(target: ResidualTarget, rotations: Array, coefficients
     count = len(rotations)
     rotations, coefficients, mask = _padded(rotations, coefficients)
     with jax.enable_x64(True):
-        # Two calls: in one program the two independent halves get into each other's way on a few CPU cores.
-        first = _value_and_gradient(target, rotations, coefficients, mask, part=_attraction)
-        second = _value_and_gradient(target, rotations, coefficients, mask, part=_repulsion)
-        value = float(target.squared_norm) + float(first[0]) + float(second[0])
-        turn, slope = (np.asarray(first[k]) + np.asarray(second[k]) for k in (1, 2))
+        # Two programs: in one the independent halves get into each other's way on a few CPU cores.
+        first = _gradient(target, rotations, coefficients, mask, part=_attraction)
+        second = _gradient(target, rotations, coefficients, mask, part=_repulsion)
+        turn, slope = (np.asarray(first[k]) + np.asarray(second[k]) for k in (0, 1))
+        # The halves are of first and second degree in λ, so their slopes tell their values (Euler).
+        value = float(target.squared_norm)
+        value += float(np.sum(coefficients * (np.asarray(first[1]) + 0.5 * np.asarray(second[1]))))
         return value, turn[:count], slope[:count]
 
 
@@ -161,11 +163,9 @@ def padded_count(count: int) -> int:
 
 
 @partial(jax.jit, static_argnames="part")
-def _value_and_gradient(target, rotations, coefficients, mask, part):
-    value, (by_rotation, by_coefficient) = jax.value_and_grad(part, argnums=(1, 2))(
-        target, rotations, coefficients, mask
-    )
-    return value, _tangent(rotations, by_rotation), by_coefficient
+def _gradient(target, rotations, coefficients, mask, part):
+    by_rotation, by_coefficient = jax.grad(part, argnums=(1, 2))(target, rotations, coefficients, mask)
+    return _tangent(rotations, jax.lax.optimization_barrier(by_rotation)), by_coefficient
 
 
 @jax.jit
