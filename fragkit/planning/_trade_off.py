@@ -147,8 +147,8 @@ def trade_off(
     >>> on_site[0, 0, 0, 0] = on_site[1, 1, 1, 1] = 4.0
     >>> ham = Hamiltonian(0.0, np.array([[0.0, -1.0], [-1.0, 0.0]]), on_site, electrons=(1, 1))
     >>> curve = trade_off(ham, reference_state(ham, "fci"), [3, 4], max_evaluations=60)
-    >>> len(curve)
-    2
+    >>> len(curve) in (1, 2)
+    True
     """
     check_state(state, hamiltonian.orbitals, hamiltonian.electrons)
     fewest = least_count(hamiltonian.orbitals)
@@ -178,7 +178,13 @@ def trade_off(
             designs[k] = again
         if again.interrupted:
             break
-    plans = tuple(plan_of_design(hamiltonian, state, design, budget, planning_noise) for design in designs)
+    # Circuits that are not needed are left out, so two numbers asked for can end as one.
+    best: dict[int, Plan] = {}
+    for design in designs:
+        made = plan_of_design(hamiltonian, state, design, budget, planning_noise)
+        if len(made) not in best or made.cost < best[len(made)].cost:
+            best[len(made)] = made
+    plans = tuple(best[count] for count in sorted(best))
     return TradeOff(plans, plan_seconds(plans, budget))
 
 
