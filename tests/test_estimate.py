@@ -241,12 +241,14 @@ def rare_outcome(shots: int, predicted: float) -> float | None:
 @pytest.mark.parametrize(
     ("shots", "deviation", "share"),
     [
-        # σ² = 0.01: an outcome of value 1 has probability 0.01 and is expected half a time in 50 shots: all is added.
-        (50, 0.1, 1.0),
+        # σ² = 0.02: an outcome of value 1 has probability 0.02 and is expected once in 50 shots: all is added.
+        (50, np.sqrt(0.02), 1.0),
+        # σ² = 0.01: it is expected half a time, and half is added.
+        (50, 0.1, 0.5),
         # The same in 5,000 shots would be seen 50 times (12 with value 2): the prediction was wrong, nothing is added.
         (5000, 0.1, 0.0),
-        # σ² = 1e-6 from an outcome expected 5e-5 times in 50 shots: it may be missed, and a thousandth is added.
-        (50, 1e-3, 1e-3),
+        # σ² = 1e-6 from an outcome expected 5e-5 times in 50 shots: it hardly matters whether it is missed.
+        (50, 1e-3, 5e-5),
     ],
 )
 def test_rare_outcomes_that_few_shots_can_miss_are_in_the_error_bar(shots: int, deviation: float, share: float) -> None:

@@ -5,9 +5,10 @@ from numpy.typing import NDArray
 
 from fragkit.core import evaluate_features, pair_indices
 from fragkit.estimate._counts import Counts
+from fragkit.estimate._fitted_vector import can_fit_vector, fitted_state
 from fragkit.estimate._sector import check_sector, in_sector
 from fragkit.planning import Plan
-from fragkit.states import GaussianState, ReferenceState
+from fragkit.states import GaussianState, ReferenceState, mixture
 
 Array = NDArray[np.float64]
 
@@ -15,7 +16,10 @@ MODEL_SHOTS = 1000.0
 """Weight of the model in the covariances, in shots: outcomes rarer than one in so many are the model's business."""
 
 MODEL_NOISE = 2e-3
-"""Depolarisation mixed into the model, which bounds the coefficients."""
+"""Depolarisation mixed into an uncorrelated model, which bounds the coefficients."""
+
+VECTOR_NOISE = 5e-4
+"""The same for a model fitted to all counts, which is nearer to the state."""
 
 
 def selected(counts: Counts, electrons: tuple[int, int]) -> Counts:
@@ -63,21 +67,25 @@ def measured_density(plan: Plan, counts: Counts) -> tuple[Array, Array]:
 def model_state(plan: Plan, counts: Counts, reference: ReferenceState | None) -> ReferenceState:
     """The smooth state that covariances are shrunk towards, with a little noise.
 
-    It is the uncorrelated state with the measured density matrix, or that and the reference in equal parts.
+    Where the sector is small against the number of shots it is the CI vector that fits all counts best; elsewhere the
+    uncorrelated state with the measured density matrix. With a reference, both count in equal parts.
     """
-    gaussian = GaussianState(*measured_density(plan, counts), hamiltonian_digest=plan.hamiltonian_digest)
-    if reference is None:
-        return gaussian.with_noise(MODEL_NOISE)
-    from fragkit.states import mixture
-
-    return mixture([(0.5, gaussian), (0.5, reference)]).with_noise(MODEL_NOISE)
+    density, noise = measured_density(plan, counts), MODEL_NOISE
+    if can_fit_vector(plan, counts):
+        model, noise = fitted_state(plan, counts, density), VECTOR_NOISE
+    else:
+        model = GaussianState(*density, hamiltonian_digest=plan.hamiltonian_digest)
+    parts = [(1.0, model)] if reference is None else [(0.5, model), (0.5, reference)]
+    return mixture(parts).with_noise(noise)
 
 
 def measured_state(plan: Plan, counts: Counts, *, reference: ReferenceState | None = None) -> ReferenceState:
     """A reference state made from counts, to plan with: new rotations, coefficients and shots for the measured state.
 
-    It is the uncorrelated state with the measured one-particle density matrices, or that and `reference` in equal
-    parts, with a little noise. Shots with other electron numbers than the plan's are left out.
+    Where the sector is small against the number of shots (at most 5,000 determinants, ten shots for each) it is the
+    noisy CI vector that fits all counts best, elsewhere the uncorrelated state with the measured one-particle density
+    matrices; or that and `reference` in equal parts. A little noise is mixed in. Shots with other electron numbers
+    than the plan's are left out.
 
     Raises
     ------

@@ -16,9 +16,6 @@ Bits = NDArray[np.uint8]
 MOST_DETERMINANTS = 20_000
 """Largest number of determinants that are listed to look for outcomes that were not seen."""
 
-_EXPECTED = 0.05
-"""Expected occurrences below which an outcome may be missed at no harm to a 95 % interval."""
-
 
 def missed_variance(
     fragment: Fragment, bits: Bits, sample: Sample, predicted: float, electrons: tuple[int, int]
@@ -28,8 +25,9 @@ def missed_variance(
     An observed variance far below the predicted one means that the state is quieter than the reference, or that the
     shots missed rare outcomes of large value. An outcome at distance Δ from the mean has probability L/Δ² if it is to
     supply what lacks, L = σ² − s². N shots can miss it if N L/Δ² is at most 3 (5 % chance). If there is such an
-    outcome among the determinants, what lacks is added; if not, the prediction was wrong and nothing is. Outcomes
-    expected far less than once in all the shots count in proportion, since they hardly ever matter.
+    outcome among the determinants, what lacks is added; if not, the prediction was wrong and nothing is. An outcome
+    that is expected λ < 1 times counts with λ: as long as it is not seen the mean is off by λΔ/N, the square of which
+    is λ times its part of the variance of the mean.
     """
     if sample.shots < 2 or predicted == 0.0:
         return None
@@ -46,7 +44,7 @@ def missed_variance(
     unseen = listed[~np.isin(listed @ powers, bits @ powers)]
     expected = sample.shots * lack / np.maximum((fragment.values(unseen) - sample.mean) ** 2, 1e-300)
     possible = expected[expected <= 3.0]
-    return lack * min(1.0, float(np.max(possible, initial=0.0)) / _EXPECTED)
+    return lack * min(1.0, float(np.max(possible, initial=0.0)))
 
 
 @lru_cache(maxsize=8)
