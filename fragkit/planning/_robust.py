@@ -3,13 +3,13 @@
 from typing import Any
 
 from fragkit.core import InputError
-from fragkit.states import DeterminantState, MaximallyMixedState, MixedState, ReferenceState
+from fragkit.states import DeterminantState, GaussianState, MaximallyMixedState, MixedState, ReferenceState
 
 PLANNING_NOISE = 1e-3
 """Default weight of the maximally mixed state in the state that coefficients and rotations are chosen for."""
 
 DETERMINANT_NOISE = 2e-2
-"""The same for a single determinant, which knows nothing of correlation."""
+"""The same for a single determinant or a Gaussian state, which know nothing of correlation."""
 
 SHARE_FRACTION = 0.1
 """Part of the planning noise that also goes into the shot shares: 3 % more shots on the reference, 5 % fewer off it."""
@@ -24,13 +24,12 @@ def noise_of(state: ReferenceState) -> float:
     return 0.0
 
 
-def is_determinant(state: ReferenceState) -> bool:
-    """Whether `state` is a single determinant, with or without noise."""
+def is_uncorrelated(state: ReferenceState) -> bool:
+    """Whether `state` is a single determinant or a Gaussian state, with or without noise."""
     if isinstance(state, MixedState):
-        return sum(not isinstance(part, MaximallyMixedState) for part in state.states) == 1 and any(
-            isinstance(part, DeterminantState) for part in state.states
-        )
-    return isinstance(state, DeterminantState)
+        parts = [part for part in state.states if not isinstance(part, MaximallyMixedState)]
+        return len(parts) == 1 and is_uncorrelated(parts[0])
+    return isinstance(state, DeterminantState | GaussianState)
 
 
 def robust_state(state: ReferenceState, planning_noise: Any = None) -> ReferenceState:
@@ -38,7 +37,7 @@ def robust_state(state: ReferenceState, planning_noise: Any = None) -> Reference
 
     The variance of a fragment in the maximally mixed state is a norm of its coefficients, so the noise is a penalty
     that is scaled right for every coefficient: without it a plan can be arbitrarily bad on a state that differs a
-    little from the reference. None is the default, 1e-3, or 2e-2 for a single determinant.
+    little from the reference. None is the default, 1e-3, or 2e-2 for a determinant or Gaussian state.
 
     Raises
     ------
@@ -67,11 +66,12 @@ def robust_state(state: ReferenceState, planning_noise: Any = None) -> Reference
 def share_state(state: ReferenceState, planning_noise: Any = None) -> ReferenceState:
     """The state whose deviations decide how shots are shared: `state` with a tenth of the planning noise.
 
-    A determinant gets all of it, since its own deviations vanish where those of the true state do not.
+    A determinant or Gaussian state gets all of it, since its own deviations are small where those of the true state
+    are not.
     """
     wanted = _default_noise(state) if planning_noise is None else float(planning_noise)
-    return robust_state(state, wanted if is_determinant(state) else SHARE_FRACTION * wanted)
+    return robust_state(state, wanted if is_uncorrelated(state) else SHARE_FRACTION * wanted)
 
 
 def _default_noise(state: ReferenceState) -> float:
-    return DETERMINANT_NOISE if is_determinant(state) else PLANNING_NOISE
+    return DETERMINANT_NOISE if is_uncorrelated(state) else PLANNING_NOISE

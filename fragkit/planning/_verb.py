@@ -94,8 +94,8 @@ def plan(
     planning_noise
         Weight of the maximally mixed state of the sector in the state that rotations and coefficients are chosen for.
         It bounds the coefficients and so keeps the plan good on states that differ from `state`; see the page on
-        planning for what it costs and saves. None is 1e-3, or 2e-2 for a single determinant, which must have some.
-        Noise that `state` has already counts.
+        planning for what it costs and saves. None is 1e-3, or 2e-2 for a determinant, which must have some, or a
+        Gaussian state. Noise that `state` has already counts.
     starts, rng, tolerance, max_evaluations
         Independent starts of the optimisation, their seed, the relative fall of the cost at which it ends, and its
         most evaluations. The same seed gives the same plan on the same machine.
