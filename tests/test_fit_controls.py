@@ -42,6 +42,30 @@ def test_an_interrupt_is_raised_unless_the_best_so_far_is_asked_for() -> None:
     assert fragments.residual_norm < np.linalg.norm(hamiltonian.two_body)
 
 
+def test_an_interrupted_search_returns_a_set_that_reached_the_tolerance(monkeypatch) -> None:
+    from fragkit.fit import _joint
+
+    hamiltonian = molecule_hamiltonian("LiH")
+    iterate = _joint.levenberg_marquardt
+    calls = []
+
+    def counting(*arguments, **options):
+        if len(calls) == stop:
+            raise KeyboardInterrupt
+        calls.append(None)
+        return iterate(*arguments, **options)
+
+    stop = -1
+    monkeypatch.setattr(_joint, "levenberg_marquardt", counting)
+    finished = fragment(hamiltonian, Joint(tol=3e-2, starts=2))
+    stop = len(calls) - 1
+    calls.clear()
+    # The last fit of a search is one with too few fragments, or the one that was found.
+    interrupted = fragment(hamiltonian, Joint(tol=3e-2, starts=2), on_interrupt="return")
+    assert interrupted.residual_norm <= 3.001e-2
+    assert len(interrupted) in (len(finished), len(finished) + 1)
+
+
 def test_an_interrupt_before_anything_is_known_is_raised() -> None:
     class Never:
         def fit(self, hamiltonian, controls):

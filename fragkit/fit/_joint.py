@@ -151,6 +151,7 @@ class _Run:
         self.penalty = Penalty(strategy.penalty, strategy.one_norm_weight)
         self.iterations = 0
         self.starts_used = 0
+        self.some_count_reached = False
         self.last_reason = ""
         self.method = ""
 
@@ -184,7 +185,10 @@ class _Run:
             point = self._minimise(begin, best)
             if best is None or point.squared < best.squared:
                 best = point
-            if self.reached(best) or self.out_of_time:
+            if self.reached(best):
+                self.some_count_reached = True
+                break
+            if self.out_of_time:
                 break
         assert best is not None  # `starts` is at least one
         return best
@@ -237,7 +241,9 @@ class _Run:
         done = self.iterations
 
         def update(point: Point, iteration: int) -> None:
-            if best is None or point.squared < best.squared:
+            # In a search, a set that reaches the tolerance is better than a smaller one that does not.
+            allowed = self.reached(point) or not self.some_count_reached
+            if allowed and (best is None or point.squared < best.squared):
                 self.controls.update(point.rotations, point.coefficients, point.norm, done + iteration)
 
         def out_of_time() -> bool:
