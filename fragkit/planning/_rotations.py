@@ -190,14 +190,13 @@ def optimise_rotations(
             for run in runs[number - 1 :]:
                 _advance(run, min(TRIAL, limit // starts), bar)
         runs.sort(key=lambda run: run.best.cost)
-        spent += sum(run.evaluations for run in runs[1:])
-        run = runs[0]
-        while not settled and not run.stuck and run.evaluations + spent < limit:
-            run.cycle(run.natural_steps, bar.show)
+        run, others = runs[0], spent + sum(run.evaluations for run in runs[1:])
+        while not settled and not run.stuck and run.evaluations + others < limit:
+            run.cycle(min(run.natural_steps, limit - others - run.evaluations), bar.show)
             fall = run.recent_fall(WINDOW)
             settled = fall is not None and fall < tolerance
             if file is not None:
-                file.write_when_due(run.best.rotations, run.best.shares, run.evaluations + spent)
+                file.write_when_due(run.best.rotations, run.best.shares, run.evaluations + others)
     except KeyboardInterrupt:
         if on_interrupt == "raise" or not runs:
             raise
@@ -207,9 +206,9 @@ def optimise_rotations(
         bar.close()
         if file is not None and runs:
             best = min(runs, key=lambda run: run.best.cost).best
-            file.write(best.rotations, best.shares, spent + runs[0].evaluations)
+            file.write(best.rotations, best.shares, spent + sum(run.evaluations for run in runs))
     best = runs[0].finish()
-    total = spent + runs[0].evaluations
+    total = spent + sum(run.evaluations for run in runs)
     return RotationDesign(
         rotations=best.rotations,
         coefficients=best.coefficients,
@@ -226,7 +225,7 @@ def optimise_rotations(
 
 def _advance(run: Run, evaluations: int, bar: "_Bar") -> None:
     while run.evaluations < evaluations and not run.stuck:
-        run.cycle(run.natural_steps, bar.show)
+        run.cycle(min(run.natural_steps, evaluations - run.evaluations), bar.show)
 
 
 def _message(run: Run, evaluations: int, settled: bool, interrupted: bool, tolerance: float) -> str:
