@@ -28,6 +28,10 @@ from fragkit.states import ReferenceState
 Array = NDArray[np.float64]
 
 
+ACTIVE = 0.9
+"""Value of φ from which on a rotation stays in the enlarged design."""
+
+
 @dataclass(frozen=True, eq=False)
 class OptimalityGap:
     """A plan's cost and what no plan with orbital rotations can go below, both in one state, hartree².
@@ -176,7 +180,8 @@ def optimality_gap(
                 break
             fresh = maxima[np.argsort(-sizes)]
             fresh = fresh[distinct(fresh, 0.01)]
-            kept = found.shares > 1e-4
+            # A rotation with hardly any shots still holds the dual back where its constraint is active.
+            kept = (found.shares > 1e-4) | (search.values(rotations, found.dual, covariances) > ACTIVE)
             rotations = np.concatenate([rotations[kept], fresh])
             covariances = [c for c, keep in zip(covariances, kept, strict=True) if keep]
             covariances += [planned_on.moments(u)[1] for u in fresh]
@@ -221,6 +226,12 @@ class PhiSearch:
     def projected(self, rows: Array) -> Array:
         """Operator rows without the shifts, as every dual has to be."""
         return self._map.shifts.project(rows)
+
+    def values(self, rotations: Array, dual: Array, covariances: list[Array]) -> Array:
+        """φ (K,) of rotations whose covariances are known."""
+        space = self._map.space
+        responses = space.adjoint(space.pair_columns(rotations), rotations, dual)
+        return np.array([r @ _solved(c, r) for c, r in zip(covariances, responses, strict=True)])
 
     def value_and_gradient(self, rotations: Array, dual: Array) -> tuple[Array, Array]:
         """φ (K,) and its gradient (K, n(n−1)/2) by X_pq, p < q, for U → U exp(X).
