@@ -202,7 +202,8 @@ class _Run:
         if best is not None and number >= 3 and number % 2 == 1:
             return point_at(self.target, turned(best.rotations, KICK, rng), best.coefficients)
         if (number == 1 or number % 4 == 0) and not large:
-            return self._greedy_start(count, starts=2)
+            # The best greedy set first, then rougher ones that differ from each other.
+            return self._greedy_start(count, starts=8 if number == 1 else 2)
         rotations, coefficients = low_rank_start(self.hamiltonian, count)
         return point_at(self.target, turned(rotations, random_turn(rng), rng), coefficients)
 
