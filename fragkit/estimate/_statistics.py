@@ -79,15 +79,20 @@ def error_bar(
     degrees of freedom).
     """
     observed = expected = uncertainty = 0.0
+    lacked = []
     unseen = [0.0] * len(samples) if missed is None else missed
     for sample, deviation, lacking in zip(samples, predicted, unseen, strict=True):
         expectation = deviation**2 / sample.shots
         # One shot shows no deviation; then the plan's is all there is.
         variance = sample.variance / sample.shots if sample.shots > 1 else expectation
         spread = sample.error_of_variance / sample.shots if sample.shots > 1 else np.sqrt(2.0) * expectation
-        lacking = lacking / sample.shots
-        observed, expected = observed + variance + lacking, expected + expectation
-        uncertainty += spread**2 + 2.0 / PLAN_WEIGHT * lacking**2
+        observed, expected, uncertainty = observed + variance, expected + expectation, uncertainty + spread**2
+        lacked.append(lacking / sample.shots)
+    if any(lacked):
+        # Σ s²/N is right on average, misses included, and over many circuits that is enough: what n circuits lack in
+        # equal parts counts as 1/n of it.
+        added = sum(x**2 for x in lacked) / sum(lacked)
+        observed, uncertainty = observed + added, uncertainty + 2.0 / PLAN_WEIGHT * added**2
     # At most as many degrees of freedom as a double can tell from infinity here.
     freedom = min(2.0 * observed**2 / uncertainty, 1e9) if uncertainty > 0.0 else (1e9 if observed > 0.0 else 0.0)
     joined = (freedom * observed + PLAN_WEIGHT * expected) / (freedom + PLAN_WEIGHT)
