@@ -231,23 +231,29 @@ def readout(figure: bool, repetitions: int) -> None:
             )
             rows.append((kind, label, 1e3 * off.mean(), 1e3 * bars.mean()))
     if figure:
-        axes = new_axes()
-        for shift, kind in ((-0.12, "low rank"), (0.12, "optimised")):
-            chosen = [row for row in rows if row[0] == kind]
-            axes.errorbar(
-                np.arange(len(chosen)) + shift,
-                [row[2] for row in chosen],
-                [row[3] for row in chosen],
-                fmt="o",
-                capsize=3,
-                label=f"{kind} plan",
-            )
-        axes.axhline(0.0, color="0.6", lw=0.8)
-        axes.set_xticks(range(4), [row[1].replace(", ", ",\n") for row in rows[:4]], fontsize=8)
-        axes.set_yscale("symlog", linthresh=30)
-        axes.set_ylabel("energy - full CI / mHa (bar: one run)")
-        axes.legend(fontsize=8)
-        save(axes, "readout.png")
+        readout_figure(rows)
+
+
+def readout_figure(rows: list[tuple[str, str, float, float]]) -> None:
+    """Rows are (plan, estimate, mean deviation / mHa, error bar of one run / mHa)."""
+    axes = new_axes()
+    for shift, kind in ((-0.12, "low rank"), (0.12, "optimised")):
+        chosen = [row for row in rows if row[0] == kind]
+        axes.errorbar(
+            np.arange(len(chosen)) + shift,
+            [row[2] for row in chosen],
+            [row[3] for row in chosen],
+            fmt="o",
+            capsize=3,
+            label=f"{kind} plan",
+        )
+    axes.axhline(0.0, color="0.6", lw=0.8)
+    axes.set_xticks(range(4), [row[1].replace(", ", ",\n") for row in rows[:4]], fontsize=8)
+    axes.set_yscale("symlog", linthresh=30)
+    axes.set_ylim(-100, 1500)
+    axes.set_ylabel("energy - full CI / mHa (bar: one run)")
+    axes.legend(fontsize=8)
+    save(axes, "readout.png")
 
 
 def adaptive(repetitions: int) -> None:

@@ -214,7 +214,7 @@ def test_degrees_of_freedom_of_normal_values_are_those_of_welch_and_satterthwait
 @pytest.mark.parametrize("name", ["H2", "H6"])
 @pytest.mark.parametrize("shots", [20, 500])
 def test_interval_covers_the_energy(name: str, shots: int) -> None:
-    """400 experiments: 95 % has a standard error of 1.1 %; the full study is in benchmarks/estimate.py."""
+    """400 experiments: 95 % has a standard error of 1.1 %; more experiments are in benchmarks/estimate.py."""
     plan, state = low_rank_plan(name, 1000), full_ci_state(name)
     exact = full_ci(name)[0]
     rng = np.random.default_rng(17)
