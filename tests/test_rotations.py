@@ -7,6 +7,7 @@ from scipy.linalg import expm
 
 from fragkit.core import Fragment, Hamiltonian, InputError, MismatchError, fragment_tensors
 from fragkit.fit import LowRank, fragment
+from fragkit.planning import plan
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._exact import exact_coefficients
 from fragkit.planning._lagrangian import Lagrangian
@@ -427,3 +428,18 @@ def test_refused_input(options: dict, message: str) -> None:
     count = options.pop("count", 9)
     with pytest.raises(InputError, match=message):
         optimise_rotations(hamiltonian, state, count, **options)
+
+
+def test_ridge_of_a_plan_bounds_its_coefficients() -> None:
+    hamiltonian = molecule_hamiltonian("H4")
+    state = reference_state(hamiltonian, "cisd")
+    sizes, costs = [], []
+    for ridge in (0.0, 1e-2):
+        made = plan(hamiltonian, state, circuits=9, planning_noise=1e-5, ridge=ridge, max_evaluations=300)
+        sizes.append(sum(float(np.sum(piece.coefficients**2)) for piece in made.fragments))
+        costs.append(made.cost)
+        assert made.residual_norm < 1e-8
+    assert sizes[1] < 0.8 * sizes[0]
+    assert costs[0] < costs[1]
+    with pytest.raises(InputError, match="`ridge` must be"):
+        plan(hamiltonian, state, ridge=-1.0)

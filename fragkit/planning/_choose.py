@@ -12,7 +12,7 @@ from fragkit.fit import Joint, fragment
 from fragkit.planning._counts import least_count
 from fragkit.planning._exact import EXACT, Weighting, exact_coefficients
 from fragkit.planning._operators import OperatorSpace
-from fragkit.planning._rotations import RotationDesign, optimise_rotations
+from fragkit.planning._rotations import RIDGE, RotationDesign, optimise_rotations
 from fragkit.states import ReferenceState
 
 Array = NDArray[np.float64]
@@ -36,6 +36,7 @@ class Settings:
     progress: bool = False
     checkpoint: str | os.PathLike[str] | None = None
     resume: bool = False
+    ridge: float = 0.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -69,12 +70,17 @@ def weighted(
     start: Array | None = None,
     tolerance: float = 1e-5,
     prune: bool = True,
+    ridge: float = 0.0,
 ) -> tuple[Array, Weighting]:
-    """Least-variance coefficients for some rotations, less the circuits that are hardly used when `prune`."""
+    """Least-variance coefficients for some rotations, less the circuits that are hardly used when `prune`.
+
+    `ridge` is added to the variance of every feature.
+    """
     if prune:
         kept = distinct(rotations, 1e-6)
         rotations, start = rotations[kept], None if start is None else start[kept]
-    covariances = [planned_on.moments(rotation)[1] for rotation in rotations]
+    added = ridge * np.eye(feature_count(hamiltonian.orbitals))
+    covariances = [planned_on.moments(rotation)[1] + added for rotation in rotations]
     found = exact_coefficients(hamiltonian, rotations, covariances, shifts=shifts, start=start, tolerance=tolerance)
     used = found.shares > UNUSED
     if not prune or np.all(used) or not np.any(used):
@@ -130,7 +136,13 @@ def design_for(
     # Close to the solution the cost converges twice as fast as its lower bound; large factorisations are saved.
     gap = 1e-5 if hamiltonian.orbitals <= 10 else 1e-3
     rotations, weighting = weighted(
-        hamiltonian, planned_on, found.rotations, shifts=settings.shifts, start=found.shares, tolerance=gap
+        hamiltonian,
+        planned_on,
+        found.rotations,
+        shifts=settings.shifts,
+        start=found.shares,
+        tolerance=gap,
+        ridge=settings.ridge,
     )
     if weighting.relative_residual > EXACT and count < least_count(hamiltonian.orbitals):
         problem = InputError(f"the optimisation ended with a relative residual of {weighting.relative_residual:.2g}")
@@ -157,6 +169,7 @@ def _optimised(
         rng=settings.rng,
         tolerance=settings.tolerance,
         max_evaluations=settings.max_evaluations,
+        ridge=max(settings.ridge, RIDGE),
         progress=settings.progress,
         checkpoint=settings.checkpoint,
         resume=settings.resume,
@@ -217,7 +230,9 @@ def from_fragments(
 ) -> Design:
     """The rotations of a fragmentation with least-variance coefficients."""
     rotations = np.stack([piece.rotation for piece in fragments])
-    rotations, weighting = weighted(hamiltonian, planned_on, rotations, shifts=settings.shifts, tolerance=1e-6)
+    rotations, weighting = weighted(
+        hamiltonian, planned_on, rotations, shifts=settings.shifts, tolerance=1e-6, ridge=settings.ridge
+    )
     message = weighting.message if fragments.converged else f"{fragments.message} {weighting.message}"
     return Design(
         rotations,

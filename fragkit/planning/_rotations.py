@@ -143,8 +143,7 @@ def optimise_rotations(
     starts = as_count(starts, "starts", minimum=1)
     limit = as_count(max_evaluations, "max_evaluations", minimum=1)
     tolerance = as_positive(tolerance, "tolerance")
-    if not isinstance(ridge, float | int) or not 0.0 <= ridge < np.inf:
-        raise InputError(f"`ridge` must be a number of at least 0 (got {ridge!r})")
+    ridge = as_ridge(ridge)
     if on_interrupt not in get_args(OnInterrupt):
         raise InputError(f"`on_interrupt` must be 'raise' or 'return' (got {on_interrupt!r})")
     n = hamiltonian.orbitals
@@ -178,7 +177,7 @@ def optimise_rotations(
             converged=True,
             message="The Hamiltonian is a constant in this sector: nothing has to be measured.",
         )
-    covariances = Covariances(state, design, float(ridge))
+    covariances = Covariances(state, design, ridge)
     bar = _Bar(progress, limit)
     runs: list[Run] = []
     interrupted = settled = False
@@ -221,6 +220,13 @@ def optimise_rotations(
         converged=settled and best.infeasibility <= FEASIBLE,
         message=_message(runs[0], total, settled, interrupted, tolerance),
     )
+
+
+def as_ridge(value: Any) -> float:
+    """Return `value` as a finite float of at least 0."""
+    if isinstance(value, bool) or not isinstance(value, float | int) or not 0.0 <= value < np.inf:
+        raise InputError(f"`ridge` must be a number of at least 0 (got {value!r})")
+    return float(value)
 
 
 def _advance(run: Run, evaluations: int, bar: "_Bar") -> None:
