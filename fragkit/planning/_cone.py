@@ -1,5 +1,8 @@
 """The least-variance problem as a second-order cone programme, solved by clarabel."""
 
+from importlib import import_module
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 from scipy import sparse
@@ -16,7 +19,7 @@ def cone_weights(design: WhitenedDesign, *, tolerance: float = 1e-8, iterations:
     Independent of the Newton iteration on the weights, and much slower: every entry of B is a constraint coefficient
     (H2O with 20 circuits: some seconds). Source of the formulation: Sagnol, arXiv:0912.5467.
     """
-    import clarabel
+    clarabel: Any = import_module("clarabel")  # its names are not declared to type checkers
 
     design.reduce()  # equations that say the same twice stop the solver
     count, (rows, columns) = design.count, design.matrix.shape
