@@ -2,7 +2,6 @@
 
 import json
 import sys
-import time
 from pathlib import Path
 
 import numpy as np
@@ -236,14 +235,13 @@ def test_impossible_times_and_probabilities_are_named(change, message):
         TimeModel(**good).seconds(rotation_circuits([np.eye(2)]), [-1])
 
 
-def test_mid_size_plan_is_compiled_and_written_in_time(tmp_path):
-    """60 circuits on 28 qubits, in the order that the planner would choose, within 5 s."""
+def test_mid_size_plan_is_compiled_and_written(tmp_path):
+    """60 circuits on 28 qubits; `benchmarks/circuits.py` takes the time."""
     fragments = random_fragments(14, 60)
-    start = time.perf_counter()
     circuits = rotation_circuits(fragments, electrons=(5, 5))
     write_circuits(tmp_path, circuits)
     export_angles(tmp_path / "angles.json", fragments, constant=0.0, electrons=(5, 5))
-    assert time.perf_counter() - start < 5.0
+    assert all(circuit.givens_count <= 2 * 14 * 13 / 2 and circuit.depth <= 14 for circuit in circuits)
     assert len(list(tmp_path.glob("*.qasm"))) == 60
 
 
