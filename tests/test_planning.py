@@ -282,6 +282,24 @@ def test_impossible_options_are_named(options: dict, error: type, message: str) 
         plan(molecule_hamiltonian("H4"), state_of("H4"), **options)
 
 
+def test_rotations_that_cannot_reproduce_the_hamiltonian_say_so() -> None:
+    hamiltonian = molecule_hamiltonian("LiH")
+    made = plan(hamiltonian, state_of("LiH"), fragments=fragment(hamiltonian, LowRank(count=6)))
+    assert not made.converged
+    assert "cannot reproduce the Hamiltonian" in made.message
+    assert made.residual_norm > 1e-3
+    state = random_state(hamiltonian, 0)
+    assert abs(planned_energy(made, state) - state.energy(hamiltonian)) <= made.energy_bound
+
+
+def test_fragments_can_start_the_optimisation() -> None:
+    hamiltonian, state = molecule_hamiltonian("H4"), state_of("H4")
+    made = plan(hamiltonian, state, fragments=low_rank("H4"), circuits=9, max_evaluations=200)
+    assert len(made) <= 9
+    assert made.residual_norm < 1e-9
+    assert made.cost < plan(hamiltonian, state, fragments=low_rank("H4")).cost
+
+
 def test_states_of_other_sectors_are_refused() -> None:
     with pytest.raises(MismatchError, match="`state` must have 4 orbitals"):
         plan(molecule_hamiltonian("H4"), state_of("H2"))
