@@ -6,7 +6,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Fragment
+from fragkit.core import Fragment, InputError
 from fragkit.estimate._correction import Correction
 from fragkit.estimate._counts import Counts
 from fragkit.estimate._rare import missed_variance
@@ -82,6 +82,11 @@ def combine(
                 keep = in_sector(bits, electrons)
                 if not np.all(keep):
                     bits, numbers = bits[keep], numbers[keep]
+            if not len(bits):
+                raise InputError(
+                    f"every part of the data must have at least one shot with {electrons} electrons of each circuit "
+                    f"(got none of circuit {m}); take more shots of it"
+                )
             values = fragment.values(bits) if correction is None else correction.values(fragment, bits)
             sample = Sample.of(values, numbers)
             deviation = float(part.deviations[m])
