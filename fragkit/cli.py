@@ -253,11 +253,7 @@ def _simulate(options: argparse.Namespace) -> int:
     _refuse_existing(options.output, options.overwrite)
     plan = fragkit.load_plan(options.plan)
     hamiltonian, state = _load_state(options)
-    if hamiltonian.digest != plan.hamiltonian_digest:
-        raise fragkit.MismatchError(
-            f"{options.integrals} must be the integrals that {options.plan} was made from "
-            f"(got digest {hamiltonian.digest[:12]}, the plan has {plan.hamiltonian_digest[:12]})"
-        )
+    plan.check_belongs_to(hamiltonian)
     counts = fragkit.simulate(plan, state, rng=options.seed)
     save_counts(counts, options.output, overwrite=options.overwrite)
     print(f"{plan.total_shots:,} shots of {len(plan)} circuits written to {options.output}")

@@ -55,7 +55,7 @@ CASES += [("symmetric", 4, (2, 2)), ("symmetric", 5, (4, 4)), ("symmetric", 6, (
 CASES += [("low rank", 6, (3, 2)), ("low rank", 7, (5, 3))]
 
 
-def check(state: ReferenceState, seed: int, *, fragments: int = 3) -> None:
+def check_gradient(state: ReferenceState, seed: int, *, fragments: int = 3) -> None:
     n = state.orbitals
     rng = np.random.default_rng(seed)
     rotations = np.array([random_rotation(n, rng) for _ in range(fragments)])
@@ -85,19 +85,19 @@ def check(state: ReferenceState, seed: int, *, fragments: int = 3) -> None:
 
 @pytest.mark.parametrize(("kind", "orbitals", "electrons"), CASES)
 def test_variance_product_and_gradient(kind, orbitals, electrons):
-    check(make_state(kind, orbitals, electrons), 2)
+    check_gradient(make_state(kind, orbitals, electrons), 2)
 
 
 @pytest.mark.parametrize("kind", ["vector", "symmetric"])
 def test_blocks_of_strings_change_nothing(kind, monkeypatch):
     monkeypatch.setattr(_ci_expectations, "_BLOCK", 70)
     monkeypatch.setattr(CIState, "_batch", lambda self: 1)
-    check(make_state(kind, 6, (3, 3)), 3)
+    check_gradient(make_state(kind, 6, (3, 3)), 3)
 
 
 def test_compound_matrices_are_used_where_the_spread_table_is_too_large(monkeypatch):
     monkeypatch.setattr(_factored, "_TABLE_BYTES", 0.0)
-    check(make_state("vector", 6, (3, 4)), 4)
+    check_gradient(make_state("vector", 6, (3, 4)), 4)
 
 
 @pytest.mark.parametrize("rank", [3, 20])
@@ -108,7 +108,7 @@ def test_large_vectors_are_factored_by_a_random_probe(rank, monkeypatch):
     vector = rng.normal(size=(20, rank)) @ rng.normal(size=(rank, 15))
     state = CIState(vector / np.linalg.norm(vector), 6, (3, 2))
     assert len(state._factored.scale) == (3 if rank == 3 else 15)
-    check(state, 6)
+    check_gradient(state, 6)
 
 
 def test_single_precision_and_threads_agree_with_the_plain_evaluation(monkeypatch):
@@ -158,7 +158,7 @@ def test_cisd_vectors_have_the_rank_of_their_single_excitations():
 
 
 def test_large_determinant_gradient():
-    check(DeterminantState.lowest(14, (7, 6)).with_noise(0.01), 8, fragments=2)
+    check_gradient(DeterminantState.lowest(14, (7, 6)).with_noise(0.01), 8, fragments=2)
 
 
 def test_compressed_state_loses_no_more_than_asked_and_keeps_its_moments():

@@ -4,6 +4,7 @@ from fragkit.core._atomic import as_path as as_path
 from fragkit.core._atomic import write_atomically as write_atomically
 from fragkit.core._cheapest_form import cheapest_form as cheapest_form
 from fragkit.core._cheapest_form import interchangeable_orbitals as interchangeable_orbitals
+from fragkit.core._checkpoint import CheckpointArchive as CheckpointArchive
 from fragkit.core._elimination import ANGLE_TOLERANCE as ANGLE_TOLERANCE
 from fragkit.core._elimination import eliminate as eliminate
 from fragkit.core._elimination import elimination as elimination

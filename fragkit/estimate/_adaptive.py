@@ -110,11 +110,7 @@ class AdaptiveRun:
         """
         if not isinstance(plan, Plan):
             raise InputError(f"`plan` must be a Plan (got {type(plan).__name__}); make one with fragkit.plan")
-        if plan.hamiltonian_digest != hamiltonian.digest:
-            raise MismatchError(
-                f"`hamiltonian` must be the one that was planned for (got digest {hamiltonian.digest[:12]}, plan "
-                f"{plan.hamiltonian_digest[:12]})"
-            )
+        plan.check_belongs_to(hamiltonian)
         if reference is not None and (reference.orbitals, reference.electrons) != (plan.orbitals, plan.electrons):
             raise MismatchError(
                 f"`reference` must have {plan.orbitals} orbitals and electrons {plan.electrons} "

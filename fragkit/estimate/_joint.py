@@ -6,7 +6,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Fragment, Hamiltonian, InputError, MismatchError, as_count, as_positive
+from fragkit.core import Fragment, Hamiltonian, InputError, as_count, as_positive
 from fragkit.estimate._least_variance import FixedShots
 from fragkit.estimate._measure import check_spanned
 from fragkit.estimate._moments import MODEL_NOISE
@@ -81,11 +81,7 @@ def joint_plan(
     InputError
         If an observable is outside the span of the circuits, or the budget is too small.
     """
-    if plan.hamiltonian_digest != hamiltonian.digest:
-        raise MismatchError(
-            f"`hamiltonian` must be the one that was planned for (got digest {hamiltonian.digest[:12]}, plan "
-            f"{plan.hamiltonian_digest[:12]})"
-        )
+    plan.check_belongs_to(hamiltonian)
     least = minimum_shots * len(plan)
     if as_count(total_shots, "total_shots") < least:
         raise InputError(f"`total_shots` must be at least {least} for {len(plan)} circuits (got {total_shots})")

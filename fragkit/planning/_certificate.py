@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Hamiltonian, InputError, MismatchError, as_count, as_positive
+from fragkit.core import Hamiltonian, InputError, as_count, as_positive
 from fragkit.planning._choose import distinct
 from fragkit.planning._cost import check_state, fragment_deviations
 from fragkit.planning._design_map import DesignMap
@@ -134,11 +134,7 @@ def optimality_gap(
     """
     if not isinstance(plan, Plan):
         raise InputError(f"`plan` must be a Plan (got {type(plan).__name__}); make one with fragkit.plan")
-    if plan.hamiltonian_digest != hamiltonian.digest:
-        raise MismatchError(
-            f"`hamiltonian` must be the one that was planned for (got digest {hamiltonian.digest[:12]}, plan "
-            f"{plan.hamiltonian_digest[:12]})"
-        )
+    plan.check_belongs_to(hamiltonian)
     check_state(state, plan.orbitals, plan.electrons)
     rounds, starts = as_count(rounds, "rounds", minimum=1), as_count(starts, "starts", minimum=1)
     tolerance = as_positive(tolerance, "tolerance")

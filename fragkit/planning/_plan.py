@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Fragment, InputError, MismatchError, as_electrons, as_real_array, frozen
+from fragkit.core import Fragment, Hamiltonian, InputError, MismatchError, as_electrons, as_real_array, frozen
 
 if TYPE_CHECKING:
     from fragkit.circuits import RotationCircuit
@@ -148,6 +148,14 @@ class Plan:
             for array in (fragment.rotation, fragment.coefficients):
                 chain.update((np.round(array, 10) + 0.0).tobytes())
         return chain.hexdigest()
+
+    def check_belongs_to(self, hamiltonian: Hamiltonian) -> None:
+        """Raise `MismatchError` unless this plan was made for exactly this Hamiltonian."""
+        if self.hamiltonian_digest != hamiltonian.digest:
+            raise MismatchError(
+                f"`hamiltonian` must be the one that was planned for (got digest {hamiltonian.digest[:12]}, plan "
+                f"{self.hamiltonian_digest[:12]}); load the integrals that the plan was made from"
+            )
 
     def check_digest(self, digest: str, *, name: str = "counts") -> None:
         """Raise `MismatchError` unless `digest` is this plan's digest."""

@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Hamiltonian, InputError, MismatchError, TimeModel, as_real_array, feature_count
+from fragkit.core import Hamiltonian, InputError, TimeModel, as_real_array, feature_count
 from fragkit.planning._assemble import assemble, weighting_fragments, weighting_promises, with_shots
 from fragkit.planning._budget import Budget
 from fragkit.planning._cost import check_state
@@ -83,11 +83,7 @@ def reweighted(
     began = time.perf_counter()
     if not isinstance(plan, Plan):
         raise InputError(f"`plan` must be a Plan (got {type(plan).__name__}); make one with fragkit.plan")
-    if plan.hamiltonian_digest != hamiltonian.digest:
-        raise MismatchError(
-            f"`hamiltonian` must be the one that was planned for (got digest {hamiltonian.digest[:12]}, plan "
-            f"{plan.hamiltonian_digest[:12]})"
-        )
+    plan.check_belongs_to(hamiltonian)
     if target_error is None and total_shots is None and seconds is None:
         target_error, total_shots = plan.target_error, None if plan.target_error else plan.total_shots
     budget = Budget(target_error, total_shots, seconds, minimum_shots, time_model)
