@@ -73,11 +73,11 @@ def test_density_matrix_with_error_bars() -> None:
 
 
 def test_cross_fitted_values_are_unbiased() -> None:
-    """60 experiments of 40 shots per circuit: coefficients from so few data would be biased on the same data."""
+    """250 experiments of 40 shots per circuit: coefficients from so few data would be biased on the same data."""
     plan, state, hamiltonian = low_rank_plan("H2", 1000), full_ci_state("H2"), molecule_hamiltonian("H2")
     rng = np.random.default_rng(8)
-    values = [measure(plan, simulate(plan, state, shots=40, rng=rng), hamiltonian)[0].value for _ in range(60)]
-    assert abs(np.mean(values) - full_ci("H2")[0]) < 3 * np.std(values) / np.sqrt(60)
+    values = [measure(plan, simulate(plan, state, shots=40, rng=rng), hamiltonian)[0].value for _ in range(250)]
+    assert abs(np.mean(values) - full_ci("H2")[0]) < 3 * np.std(values) / np.sqrt(250)
 
 
 def random_plan(name: str, circuits: int) -> Plan:

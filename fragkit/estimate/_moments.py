@@ -71,8 +71,10 @@ def model_state(plan: Plan, counts: Counts, reference: ReferenceState | None) ->
     uncorrelated state with the measured density matrix. With a reference, both count in equal parts.
     """
     density, noise = measured_density(plan, counts), MODEL_NOISE
-    if can_fit_vector(plan, counts):
-        model, noise = fitted_state(plan, counts, density), VECTOR_NOISE
+    # Shots outside the sector stay in where readout is corrected; a vector of the sector cannot have them.
+    inside = selected(counts, plan.electrons)
+    if can_fit_vector(plan, inside):
+        model, noise = fitted_state(plan, inside, density), VECTOR_NOISE
     else:
         model = GaussianState(*density, hamiltonian_digest=plan.hamiltonian_digest)
     parts = [(1.0, model)] if reference is None else [(0.5, model), (0.5, reference)]
