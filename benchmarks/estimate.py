@@ -268,10 +268,11 @@ def adaptive(repetitions: int) -> None:
     print(f"{'start':44}{'as planned':>11}{'adaptive':>10}{'least':>8}{'ratio':>7}{'gain':>6}{'z':>7}")
     cases = {
         "low rank, coefficients as they come": {"fragments": given, "reweight": False},
-        "low rank, least variance, noise 1e-3": {"fragments": given},
+        "low rank, least variance, default noise": {"fragments": given},
         "low rank, least variance, noise 1e-5": {"fragments": given, "planning_noise": 1e-5},
-        "optimised rotations, noise 1e-3": {},
+        "optimised rotations, default noise": {},
         "optimised rotations, noise 1e-2": {"planning_noise": 1e-2},
+        "optimised rotations, noise 5e-5": {"planning_noise": 5e-5},
     }
     for label, options in cases.items():
         start = plan(hamiltonian, determinant, total_shots=total, **options)
