@@ -77,10 +77,11 @@ def test_newton_steps_and_cone_programme_agree(name: str, method: str, noise: fl
     rotations = low_rank_rotations(name)
     matrices = covariances(reference_state(hamiltonian, method, noise=noise), rotations)
     newton = exact_coefficients(hamiltonian, rotations, matrices)
+    # The general solver's last digits depend on its version and on the degenerate orbitals of LiH.
     cone = exact_coefficients(hamiltonian, rotations, matrices, method="cone")
     assert newton.converged, newton.message
-    assert cone.converged, cone.message
-    assert newton.cost == pytest.approx(cone.cost, rel=3e-6)
+    assert cone.lower_bound > (1 - 1e-5) * cone.cost, cone.message
+    assert newton.cost == pytest.approx(cone.cost, rel=1e-5)
     np.testing.assert_allclose(newton.shares, cone.shares, atol=2e-3)
 
 
