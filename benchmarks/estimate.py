@@ -150,7 +150,6 @@ def bias(repetitions: int) -> None:
     for name in ("H2", "H2O"):
         made = optimised(name) if name == "H2O" else low_rank(name)
         device, rng = Device(name, rotations(made)), np.random.default_rng(31)
-        few = repetitions if name == "H2" else max(repetitions // 10, 50)
         show(name, "100 shots per circuit", [estimate(made, device.run(made, 100, rng)) for _ in range(repetitions)])
         show(
             name,
@@ -162,15 +161,15 @@ def bias(repetitions: int) -> None:
             known = ReadoutErrors.known(*flips, orbitals=n)
             show(
                 name,
-                f"flips {flips[0]:.0%}/{flips[1]:.0%}, known, {few} runs",
-                [estimate(made, device.run(made, 300, rng, flips), readout=known) for _ in range(few)],
+                f"flips {flips[0]:.0%}/{flips[1]:.0%}, known, {repetitions} runs",
+                [estimate(made, device.run(made, 300, rng, flips), readout=known) for _ in range(repetitions)],
             )
             show(
                 name,
-                f"flips {flips[0]:.0%}/{flips[1]:.0%}, calibrated, {few} runs",
+                f"flips {flips[0]:.0%}/{flips[1]:.0%}, calibrated, {repetitions} runs",
                 [
                     estimate(made, device.run(made, 300, rng, flips), readout=calibration(flips, n, 2000, rng))
-                    for _ in range(few)
+                    for _ in range(repetitions)
                 ],
             )
     adaptive_bias(repetitions, show)
