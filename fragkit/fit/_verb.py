@@ -73,11 +73,8 @@ def fragment(
 
     Examples
     --------
-    >>> import numpy as np
-    >>> from fragkit.core import Hamiltonian
-    >>> on_site = np.zeros((2, 2, 2, 2))
-    >>> on_site[0, 0, 0, 0] = on_site[1, 1, 1, 1] = 4.0
-    >>> ham = Hamiltonian(0.0, np.array([[0.0, -1.0], [-1.0, 0.0]]), on_site, electrons=(1, 1))
+    >>> import fragkit
+    >>> ham = fragkit.hubbard(2, repulsion=4.0, electrons=(1, 1), periodic=False)
     >>> fragments = fragment(ham)
     >>> fragments.converged, bool(fragments.residual_norm < 1e-12)
     (True, True)

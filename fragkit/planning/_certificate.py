@@ -122,11 +122,10 @@ def optimality_gap(
 
     Examples
     --------
+    >>> import fragkit
     >>> from fragkit.planning import plan
     >>> from fragkit.states import reference_state
-    >>> on_site = np.zeros((2, 2, 2, 2))
-    >>> on_site[0, 0, 0, 0] = on_site[1, 1, 1, 1] = 4.0
-    >>> ham = Hamiltonian(0.0, np.array([[0.0, -1.0], [-1.0, 0.0]]), on_site, electrons=(1, 1))
+    >>> ham = fragkit.hubbard(2, repulsion=4.0, electrons=(1, 1), periodic=False)
     >>> state = reference_state(ham, "fci", noise=0.01)
     >>> gap = optimality_gap(plan(ham, state, max_evaluations=60), ham, state, rounds=2, starts=4)
     >>> 0 < gap.quantum_limit <= gap.lower_bound <= gap.cost

@@ -86,11 +86,9 @@ def differentiable_cost(hamiltonian: Hamiltonian, vector: Any, *, noise: float =
 
     Examples
     --------
+    >>> import fragkit
     >>> import jax
-    >>> from fragkit.core import Hamiltonian
-    >>> on_site = np.zeros((2, 2, 2, 2))
-    >>> on_site[0, 0, 0, 0] = on_site[1, 1, 1, 1] = 4.0
-    >>> ham = Hamiltonian(0.0, np.array([[0.0, -1.0], [-1.0, 0.0]]), on_site, electrons=(1, 1))
+    >>> ham = fragkit.hubbard(2, repulsion=4.0, electrons=(1, 1), periodic=False)
     >>> cost = differentiable_cost(ham, np.full((2, 2), 0.5))
     >>> angles = np.array([0.3, 1.0, 2.0])
     >>> turns = np.stack([np.array([[np.cos(t), -np.sin(t)], [np.sin(t), np.cos(t)]]) for t in angles])

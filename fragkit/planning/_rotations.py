@@ -129,12 +129,9 @@ def optimise_rotations(
 
     Examples
     --------
-    >>> import numpy as np
-    >>> from fragkit.core import Hamiltonian
+    >>> import fragkit
     >>> from fragkit.states import reference_state
-    >>> on_site = np.zeros((2, 2, 2, 2))
-    >>> on_site[0, 0, 0, 0] = on_site[1, 1, 1, 1] = 4.0
-    >>> ham = Hamiltonian(0.0, np.array([[0.0, -1.0], [-1.0, 0.0]]), on_site, electrons=(1, 1))
+    >>> ham = fragkit.hubbard(2, repulsion=4.0, electrons=(1, 1), periodic=False)
     >>> design = optimise_rotations(ham, reference_state(ham, "fci", noise=1e-3), 3)
     >>> bool(design.infeasibility < 1e-10)
     True

@@ -131,12 +131,9 @@ def plan(
 
     Examples
     --------
-    >>> import numpy as np
-    >>> from fragkit.core import Hamiltonian
+    >>> import fragkit
     >>> from fragkit.states import reference_state
-    >>> on_site = np.zeros((2, 2, 2, 2))
-    >>> on_site[0, 0, 0, 0] = on_site[1, 1, 1, 1] = 4.0
-    >>> ham = Hamiltonian(0.0, np.array([[0.0, -1.0], [-1.0, 0.0]]), on_site, electrons=(1, 1))
+    >>> ham = fragkit.hubbard(2, repulsion=4.0, electrons=(1, 1), periodic=False)
     >>> two_site = plan(ham, reference_state(ham, "fci"), target_error=1e-3)
     >>> two_site.predicted_error <= 1e-3, two_site.residual_norm < 1e-9
     (True, True)
