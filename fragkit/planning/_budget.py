@@ -7,7 +7,16 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import ANGLE_TOLERANCE, InputError, TimeModel, as_count, as_positive, eliminate, mesh_positions
+from fragkit.core import (
+    ANGLE_TOLERANCE,
+    InputError,
+    TimeModel,
+    as_count,
+    as_positive,
+    cheapest_order,
+    eliminate,
+    mesh_positions,
+)
 from fragkit.planning._allocation import shots_for_error, shots_for_seconds, shots_for_total
 from fragkit.planning._plan import CHEMICAL_ACCURACY
 
@@ -18,8 +27,9 @@ Array = NDArray[np.float64]
 class Budget:
     """One of a target error (hartree), a number of shots or a time (seconds), and the least shots of a circuit.
 
-    Without any of the three the target is one kcal/mol. With a time model and a target error or a time, the shots are
-    chosen for the least time instead of the fewest shots: in proportion to σ/√(seconds of a shot).
+    Without any of the three the target is one kcal/mol. With a time model and a target error or a time, coefficients
+    and shots are chosen for the least time instead of the fewest shots: least Σ σ √t, t the seconds of a shot, and
+    shots in proportion to σ/√t.
     """
 
     target_error: float | None = None
@@ -55,6 +65,19 @@ class Budget:
     def saves_time(self) -> bool:
         """Whether time, not the number of shots, is what is spent."""
         return self.time_model is not None and self.total_shots is None
+
+    def shot_weights(self, rotations: Sequence[Array], *, reorder: bool = True) -> Array:
+        """(K,) what a shot of each circuit counts where coefficients are chosen: the least Σ σ √weight is wanted.
+
+        Ones, unless time is spent: then the seconds of a shot over those with all n layers, so that generic rotations
+        have ones as well and costs of different circuits compare. With `reorder` the circuits may list their orbitals
+        in the order that is cheapest to compile.
+        """
+        if self.time_model is None or not self.saves_time:
+            return np.ones(len(rotations))
+        if reorder:
+            rotations = [rotation[:, cheapest_order(rotation)[0]] for rotation in rotations]
+        return self.prices(rotations) / self.time_model.shot_seconds(len(rotations[0]))
 
     def prices(self, rotations: Sequence[Array]) -> Array:
         """(K,) seconds of a shot of each circuit, or ones without a time model."""

@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from fragkit.core import Fragmentation, Hamiltonian, InputError, feature_count
 from fragkit.fit import Joint, fragment
+from fragkit.planning._budget import Budget
 from fragkit.planning._counts import least_count
 from fragkit.planning._exact import EXACT, Weighting, exact_coefficients
 from fragkit.planning._operators import OperatorSpace
@@ -26,8 +27,9 @@ SPARE = 2
 
 @dataclass(frozen=True, eq=False)
 class Settings:
-    """How hard to look for rotations."""
+    """How hard to look for rotations, and what is spent on them."""
 
+    budget: Budget
     shifts: bool = True
     starts: int = 1
     rng: np.random.Generator | int | None = 0
@@ -41,7 +43,11 @@ class Settings:
 
 @dataclass(frozen=True, eq=False)
 class Design:
-    """Rotations (K, n, n) with their least-variance weighting, and how they were found."""
+    """Rotations (K, n, n) with their least-variance weighting, and how they were found.
+
+    Where time is spent the covariances of the weighting are those of the features times `Budget.shot_weights`: its
+    shares are then fractions of the time, and its cost compares times.
+    """
 
     rotations: Array
     weighting: Weighting
@@ -49,6 +55,11 @@ class Design:
     message: str
     method: str
     interrupted: bool = False
+
+    @property
+    def rank(self) -> tuple[bool, float]:
+        """Smaller is better: exact designs come first, then those of less cost."""
+        return self.weighting.relative_residual > EXACT, self.weighting.cost
 
 
 def default_count(orbitals: int, maximum: int | None = None) -> int:
@@ -65,23 +76,24 @@ def weighted(
     hamiltonian: Hamiltonian,
     planned_on: ReferenceState,
     rotations: Array,
+    settings: Settings,
     *,
-    shifts: bool,
     start: Array | None = None,
     tolerance: float = 1e-5,
     prune: bool = True,
-    ridge: float = 0.0,
 ) -> tuple[Array, Weighting]:
-    """Least-variance coefficients for some rotations, less the circuits that are hardly used when `prune`.
-
-    `ridge` is added to the variance of every feature.
-    """
+    """Coefficients of least cost for some rotations, less the circuits that are hardly used when `prune`."""
     if prune:
         kept = distinct(rotations, 1e-6)
         rotations, start = rotations[kept], None if start is None else start[kept]
-    added = ridge * np.eye(feature_count(hamiltonian.orbitals))
-    covariances = [planned_on.moments(rotation)[1] + added for rotation in rotations]
-    found = exact_coefficients(hamiltonian, rotations, covariances, shifts=shifts, start=start, tolerance=tolerance)
+    added = settings.ridge * np.eye(feature_count(hamiltonian.orbitals))
+    weights = settings.budget.shot_weights(list(rotations))
+    covariances = [
+        weight * (planned_on.moments(rotation)[1] + added) for weight, rotation in zip(weights, rotations, strict=True)
+    ]
+    found = exact_coefficients(
+        hamiltonian, rotations, covariances, shifts=settings.shifts, start=start, tolerance=tolerance
+    )
     used = found.shares > UNUSED
     if not prune or np.all(used) or not np.any(used):
         return rotations, found
@@ -90,7 +102,7 @@ def weighted(
         hamiltonian,
         rotations[kept],
         [covariances[k] for k in kept],
-        shifts=shifts,
+        shifts=settings.shifts,
         start=found.shares[kept],
         tolerance=tolerance,
     )
@@ -139,10 +151,9 @@ def design_for(
         hamiltonian,
         planned_on,
         found.rotations,
-        shifts=settings.shifts,
+        settings,
         start=found.shares,
         tolerance=gap,
-        ridge=settings.ridge,
     )
     if weighting.relative_residual > EXACT and count < least_count(hamiltonian.orbitals):
         problem = InputError(f"the optimisation ended with a relative residual of {weighting.relative_residual:.2g}")
@@ -230,9 +241,7 @@ def from_fragments(
 ) -> Design:
     """The rotations of a fragmentation with least-variance coefficients."""
     rotations = np.stack([piece.rotation for piece in fragments])
-    rotations, weighting = weighted(
-        hamiltonian, planned_on, rotations, shifts=settings.shifts, tolerance=1e-6, ridge=settings.ridge
-    )
+    rotations, weighting = weighted(hamiltonian, planned_on, rotations, settings, tolerance=1e-6)
     message = weighting.message if fragments.converged else f"{fragments.message} {weighting.message}"
     return Design(
         rotations,

@@ -94,8 +94,14 @@ def reweighted(
     else:
         features = feature_count(plan.orbitals)
         covariances = as_real_array(reference, "reference", (len(plan), features, features))
+    weights = budget.shot_weights(list(rotations), reorder=False)
     weighting = exact_coefficients(
-        hamiltonian, rotations, covariances, shifts=use_shifts, start=plan.shares, tolerance=tolerance
+        hamiltonian,
+        rotations,
+        [weight * covariance for weight, covariance in zip(weights, covariances, strict=True)],
+        shifts=use_shifts,
+        start=plan.shares,
+        tolerance=tolerance,
     )
     promises = weighting_promises(weighting) | {
         "converged": weighting.converged,
@@ -114,12 +120,13 @@ def reweighted(
             reorder=False,
             **promises,
         )
+    deviations = weighting.deviations / np.sqrt(weights)
     return with_shots(
         hamiltonian,
         fragments,
         budget,
-        weighting.deviations,
-        weighting.deviations,
+        deviations,
+        deviations,
         reference="given covariances",
         **promises,
     )

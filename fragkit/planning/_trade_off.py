@@ -156,7 +156,9 @@ def trade_off(
         raise InputError("`counts` must hold at least one number of circuits (got none)")
     budget = Budget(target_error, total_shots, None, minimum_shots, time_model)
     planned_on = robust_state(state, planning_noise)
-    settings = Settings(shifts=shifts, rng=rng, tolerance=tolerance, max_evaluations=max_evaluations, progress=progress)
+    settings = Settings(
+        budget, shifts=shifts, rng=rng, tolerance=tolerance, max_evaluations=max_evaluations, progress=progress
+    )
     designs: list[Design] = []
     for count in numbers:
         warm = designs[-1].rotations if designs and len(designs[-1].rotations) <= count else None
@@ -169,19 +171,17 @@ def trade_off(
         shares = designs[k + 1].weighting.shares
         heavy = np.sort(np.argsort(-shares)[: numbers[k]])
         again = design_for(hamiltonian, planned_on, numbers[k], settings, start=designs[k + 1].rotations[heavy])
-        if again.weighting.converged >= designs[k].weighting.converged and (
-            again.weighting.cost < designs[k].weighting.cost
-        ):
+        if again.rank < designs[k].rank:
             designs[k] = again
         if again.interrupted:
             break
     # Circuits that are not needed are left out, so two numbers asked for can end as one.
-    best: dict[int, Plan] = {}
+    best: dict[int, Design] = {}
     for design in designs:
-        made = plan_of_design(hamiltonian, state, design, budget, planning_noise)
-        if len(made) not in best or made.cost < best[len(made)].cost:
-            best[len(made)] = made
-    plans = tuple(best[count] for count in sorted(best))
+        count = len(design.rotations)
+        if count not in best or design.rank < best[count].rank:
+            best[count] = design
+    plans = tuple(plan_of_design(hamiltonian, state, best[count], budget, planning_noise) for count in sorted(best))
     return TradeOff(plans, plan_seconds(plans, budget))
 
 

@@ -90,7 +90,8 @@ def plan(
     minimum_shots
         Shots that every circuit gets at least; a few are needed to estimate each circuit's variance.
     time_model
-        Times of a device. With it the shots are chosen for the least time instead of the least number.
+        Times of a device. With it coefficients and shots are chosen for the least time instead of the fewest shots,
+        unless `total_shots` is given. Rotations are those of the fewest shots.
     circuit_overhead
         For "auto" without a time model: shots that a further circuit is worth. With one, its `switch_seconds` count.
     planning_noise
@@ -157,6 +158,7 @@ def plan(
     if not reweight:
         return _as_given(hamiltonian, state, fragments, circuits, budget, planning_noise, began)
     settings = Settings(
+        budget,
         shifts=bool(shifts),
         starts=as_count(starts, "starts", minimum=1),
         rng=rng,
@@ -176,7 +178,7 @@ def plan(
         overhead = float(circuit_overhead)
         if not 0.0 <= overhead < np.inf:
             raise InputError(f"`circuit_overhead` must be a number of at least 0 (got {circuit_overhead!r})")
-        design = _knee(hamiltonian, state, planned_on, budget, settings, planning_noise, limit, overhead)
+        design = _knee(hamiltonian, state, planned_on, settings, planning_noise, limit, overhead)
     elif circuits == "minimal":
         design = fewest_circuits(hamiltonian, planned_on, settings)
     elif circuits is None and fragments is not None:
@@ -193,7 +195,7 @@ def plan(
     made = plan_of_design(hamiltonian, state, design, budget, planning_noise, seconds=time.perf_counter() - began)
     if settings.shifts:
         return made
-    with_shifts = _cost_with_shifts(hamiltonian, state, planned_on, design, budget, planning_noise)
+    with_shifts = _cost_with_shifts(hamiltonian, state, planned_on, design, settings, planning_noise)
     return replace(made, diagnostics=made.diagnostics | {"reference, with symmetry shifts": with_shifts})
 
 
@@ -230,7 +232,6 @@ def _knee(
     hamiltonian: Hamiltonian,
     state: ReferenceState,
     planned_on: ReferenceState,
-    budget: Budget,
     settings: Settings,
     planning_noise: float | None,
     limit: int | None,
@@ -246,13 +247,13 @@ def _knee(
         nonlocal best, least, stopped
         try:
             design = design_for(hamiltonian, planned_on, count, settings, start=warm)
-            made = plan_of_design(hamiltonian, state, design, budget, planning_noise)
+            made = plan_of_design(hamiltonian, state, design, settings.budget, planning_noise)
         except InputError:
             if best is None:
                 raise
             return False  # too few circuits to be exact, or too many for the budget
         stopped = design.interrupted
-        spent = _spent(made, budget, overhead)
+        spent = _spent(made, settings.budget, overhead)
         if best is not None and (spent >= least or design.weighting.relative_residual > EXACT):
             return False
         best, least = design, spent
@@ -295,12 +296,17 @@ def _cost_with_shifts(
     state: ReferenceState,
     planned_on: ReferenceState,
     design: Design,
-    budget: Budget,
+    settings: Settings,
     planning_noise: float | None,
 ) -> float:
     """Cost on the reference of the same rotations when symmetry shifts may be used."""
     rotations, weighting = weighted(
-        hamiltonian, planned_on, design.rotations, shifts=True, start=design.weighting.shares, prune=False
+        hamiltonian,
+        planned_on,
+        design.rotations,
+        replace(settings, shifts=True),
+        start=design.weighting.shares,
+        prune=False,
     )
     other = replace(design, rotations=rotations, weighting=weighting)
-    return plan_of_design(hamiltonian, state, other, budget, planning_noise).diagnostics["reference"]
+    return plan_of_design(hamiltonian, state, other, settings.budget, planning_noise).diagnostics["reference"]
