@@ -22,8 +22,14 @@ MAY_IMPORT = {
     "report": {"core", "readers", "fit", "states", "circuits", "pauli", "planning", "estimate"},
     "files": {"core", "readers", "fit", "states", "circuits", "pauli", "planning", "estimate"},
 }
-# Methods of Plan, Counts and Estimate forward to upper rooms, and import them in the method's body.
-FORWARDING = {"planning/_plan.py", "estimate/_adaptive.py", "estimate/_counts.py", "estimate/_estimate.py"}
+# Methods of Plan, TradeOff, Counts and Estimate forward to upper rooms, and import them in the method's body.
+FORWARDING = {
+    "planning/_plan.py",
+    "planning/_trade_off.py",
+    "estimate/_adaptive.py",
+    "estimate/_counts.py",
+    "estimate/_estimate.py",
+}
 
 
 def imported_rooms(tree: ast.AST) -> set[str]:
@@ -46,6 +52,31 @@ def test_lower_rooms_never_import_upper_ones(room: str) -> None:
             tree = ast.Module([node for node in tree.body if isinstance(node, ast.Import | ast.ImportFrom)], [])
         wrong = imported_rooms(tree) - MAY_IMPORT[room] - {room}
         assert not wrong, f"{room}/{path.name} imports {sorted(wrong)}"
+
+
+def imported_paths(tree: ast.AST) -> list[str]:
+    """Dotted paths of everything that is imported, names out of modules included."""
+    paths = []
+    for node in ast.walk(tree):
+        if isinstance(node, ast.ImportFrom):
+            assert node.level == 0, "relative import"
+            paths += [f"{node.module}.{alias.name}" for alias in node.names]
+        elif isinstance(node, ast.Import):
+            paths += [alias.name for alias in node.names]
+    return paths
+
+
+def test_rooms_use_each_others_front_doors_only() -> None:
+    seen = 0
+    for path in sorted(PACKAGE.rglob("*.py")):
+        room = path.relative_to(PACKAGE).parts[0]
+        for imported in imported_paths(ast.parse(path.read_text())):
+            parts = imported.split(".")
+            if parts[0] != "fragkit" or len(parts) < 3 or parts[1] == room:
+                continue
+            seen += 1
+            assert not any(part.startswith("_") for part in parts[2:]), f"{path} imports {imported}"
+    assert seen > 100
 
 
 def test_every_public_name_resolves_and_is_declared_to_type_checkers() -> None:

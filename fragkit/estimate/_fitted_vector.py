@@ -7,8 +7,7 @@ from numpy.typing import NDArray
 
 from fragkit.estimate._counts import Counts
 from fragkit.planning import Plan
-from fragkit.states import CIState, ReferenceState
-from fragkit.states._strings import compound_matrix, string_ranks
+from fragkit.states import CIState, ReferenceState, compound_matrix, string_ranks
 
 Array = NDArray[np.float64]
 

@@ -8,3 +8,5 @@ from fragkit.states._maximally_mixed import MaximallyMixedState as MaximallyMixe
 from fragkit.states._mixed import MixedState as MixedState
 from fragkit.states._mixed import mixture as mixture
 from fragkit.states._reference import reference_state as reference_state
+from fragkit.states._strings import compound_matrix as compound_matrix
+from fragkit.states._strings import string_ranks as string_ranks
