@@ -2,12 +2,14 @@
 
 from functools import cache
 from math import comb
+from typing import Any
 
 import numpy as np
 import pytest
 from molecules import FULL_CI, full_ci, molecule_hamiltonian
 
 from fragkit.core import Fragmentation, Hamiltonian, InputError, MismatchError, TimeModel, fragment_tensors
+from fragkit.estimate import AdaptiveRun
 from fragkit.fit import LowRank, fragment
 from fragkit.planning import CHEMICAL_ACCURACY, Plan, optimality_gap, plan, plan_cost, reweighted, trade_off
 from fragkit.planning._certificate import PhiSearch
@@ -300,6 +302,28 @@ def test_fragments_can_start_the_optimisation() -> None:
     assert made.cost < plan(hamiltonian, state, fragments=low_rank("H4")).cost
 
 
+def test_what_is_no_hamiltonian_or_no_plan_is_named() -> None:
+    hamiltonian, state = molecule_hamiltonian("H2"), state_of("H2")
+    made = plan(hamiltonian, state, fragments=low_rank("H2"))
+    wrong: Any = "H2"
+    for call in (
+        lambda: plan(wrong, state),
+        lambda: trade_off(wrong, state),
+        lambda: reweighted(made, wrong, state),
+        lambda: AdaptiveRun.start(made, wrong, total_shots=1000),
+    ):
+        with pytest.raises(InputError, match=r"`hamiltonian` must be a Hamiltonian \(got str\)"):
+            call()
+    for call in (
+        lambda: plan_cost(wrong, state),
+        lambda: reweighted(wrong, hamiltonian, state),
+        lambda: optimality_gap(wrong, hamiltonian, state),
+        lambda: AdaptiveRun.start(wrong, hamiltonian, total_shots=1000),
+    ):
+        with pytest.raises(InputError, match=r"`plan` must be a Plan \(got str\)"):
+            call()
+
+
 def test_states_of_other_sectors_are_refused() -> None:
     with pytest.raises(MismatchError, match="`state` must have 4 orbitals"):
         plan(molecule_hamiltonian("H4"), state_of("H2"))
@@ -339,7 +363,7 @@ def test_trade_off_falls_and_levels_off() -> None:
     assert curve.seconds is not None
     assert len(curve.best()) in (8, 10, 14)
     lines = curve.table().splitlines()
-    assert len(lines) == 4
+    assert len(lines) == 5  # titles, a rule, and one line for each number of circuits
     assert "circuits" in lines[0]
     assert all(made.residual_norm < 1e-9 for made in curve.plans)
 

@@ -24,6 +24,7 @@ from fragkit.core._features import unpack_features as unpack_features
 from fragkit.core._fragment import Fragment as Fragment
 from fragkit.core._fragmentation import Fragmentation as Fragmentation
 from fragkit.core._hamiltonian import Hamiltonian as Hamiltonian
+from fragkit.core._hamiltonian import as_hamiltonian as as_hamiltonian
 from fragkit.core._one_norm import one_norm as one_norm
 from fragkit.core._openfermion import spatial_integrals as spatial_integrals
 from fragkit.core._operator_tensors import OperatorTensors as OperatorTensors

@@ -222,3 +222,13 @@ class Hamiltonian:
         return (
             f"Hamiltonian(orbitals={self.orbitals}, electrons={self.electrons}, constant={self.constant:.6f}, {form})"
         )
+
+
+def as_hamiltonian(value: Any) -> Hamiltonian:
+    """Return `value`, an argument named `hamiltonian`, if it is a Hamiltonian; raise `InputError` otherwise."""
+    if not isinstance(value, Hamiltonian):
+        raise InputError(
+            f"`hamiltonian` must be a Hamiltonian (got {type(value).__name__}); make one with fragkit.from_pyscf, "
+            "fragkit.from_fcidump or fragkit.Hamiltonian"
+        )
+    return value

@@ -17,7 +17,7 @@ from fragkit.estimate._moments import model_state, selected, shrunk_covariances
 from fragkit.estimate._readout import ReadoutErrors
 from fragkit.estimate._shares import whole_shots
 from fragkit.estimate._verb import check_counts, estimate_parts
-from fragkit.planning import Plan, reweighted
+from fragkit.planning import Plan, as_plan, reweighted
 from fragkit.states import ReferenceState
 
 Array = NDArray[np.float64]
@@ -108,9 +108,7 @@ class AdaptiveRun:
         >>> run.used_shots
         4000
         """
-        if not isinstance(plan, Plan):
-            raise InputError(f"`plan` must be a Plan (got {type(plan).__name__}); make one with fragkit.plan")
-        plan.check_belongs_to(hamiltonian)
+        as_plan(plan).check_belongs_to(hamiltonian)
         if reference is not None and (reference.orbitals, reference.electrons) != (plan.orbitals, plan.electrons):
             raise MismatchError(
                 f"`reference` must have {plan.orbitals} orbitals and electrons {plan.electrons} "

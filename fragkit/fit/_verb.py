@@ -8,7 +8,7 @@ from typing import Literal, get_args
 import numpy as np
 from threadpoolctl import threadpool_limits
 
-from fragkit.core import Fragment, Fragmentation, Hamiltonian, InputError
+from fragkit.core import Fragment, Fragmentation, Hamiltonian, InputError, as_hamiltonian
 from fragkit.fit._checkpoint import Checkpoint, CheckpointFile
 from fragkit.fit._controls import Controls
 from fragkit.fit._fit import Fit, Strategy
@@ -79,11 +79,7 @@ def fragment(
     >>> fragments.converged, bool(fragments.residual_norm < 1e-12)
     (True, True)
     """
-    if not isinstance(hamiltonian, Hamiltonian):
-        raise InputError(
-            f"`hamiltonian` must be a Hamiltonian (got {type(hamiltonian).__name__}); make one with "
-            "fragkit.from_pyscf, fragkit.from_fcidump or fragkit.Hamiltonian"
-        )
+    as_hamiltonian(hamiltonian)
     chosen: Strategy = LowRank() if strategy is None else strategy
     if isinstance(chosen, type) or not callable(getattr(chosen, "fit", None)):
         raise InputError(

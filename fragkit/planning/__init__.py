@@ -11,6 +11,7 @@ from fragkit.planning._operators import OperatorSpace as OperatorSpace
 from fragkit.planning._plan import CHEMICAL_ACCURACY as CHEMICAL_ACCURACY
 from fragkit.planning._plan import Plan as Plan
 from fragkit.planning._plan import PlanBound as PlanBound
+from fragkit.planning._plan import as_plan as as_plan
 from fragkit.planning._reweighted import reweighted as reweighted
 from fragkit.planning._rotations import RotationDesign as RotationDesign
 from fragkit.planning._rotations import optimise_rotations as optimise_rotations

@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import Fragment, InputError, MismatchError
-from fragkit.planning._plan import Plan
+from fragkit.planning._plan import Plan, as_plan
 from fragkit.states import ReferenceState
 
 Array = NDArray[np.float64]
@@ -40,8 +40,7 @@ def plan_cost(plan: Plan, state: ReferenceState) -> float:
     >>> plan_cost(two_site, reference_state(ham, "hf")) > 0
     True
     """
-    if not isinstance(plan, Plan):
-        raise InputError(f"`plan` must be a Plan (got {type(plan).__name__}); make one with fragkit.plan")
+    as_plan(plan)
     check_state(state, plan.orbitals, plan.electrons)
     return float(np.sum(fragment_deviations(plan.fragments, state) ** 2 / plan.shares))
 

@@ -8,7 +8,16 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Fragment, Hamiltonian, InputError, MismatchError, as_electrons, as_real_array, frozen
+from fragkit.core import (
+    Fragment,
+    Hamiltonian,
+    InputError,
+    MismatchError,
+    as_electrons,
+    as_hamiltonian,
+    as_real_array,
+    frozen,
+)
 
 if TYPE_CHECKING:
     from fragkit.circuits import RotationCircuit
@@ -151,7 +160,7 @@ class Plan:
 
     def check_belongs_to(self, hamiltonian: Hamiltonian) -> None:
         """Raise `MismatchError` unless this plan was made for exactly this Hamiltonian."""
-        if self.hamiltonian_digest != hamiltonian.digest:
+        if self.hamiltonian_digest != as_hamiltonian(hamiltonian).digest:
             raise MismatchError(
                 f"`hamiltonian` must be the one that was planned for (got digest {hamiltonian.digest[:12]}, plan "
                 f"{self.hamiltonian_digest[:12]}); load the integrals that the plan was made from"
@@ -213,3 +222,10 @@ class Plan:
         from fragkit.report import plan_html
 
         return plan_html(self)
+
+
+def as_plan(value: Any) -> Plan:
+    """Return `value`, an argument named `plan`, if it is a plan; raise `InputError` otherwise."""
+    if not isinstance(value, Plan):
+        raise InputError(f"`plan` must be a Plan (got {type(value).__name__}); make one with fragkit.plan")
+    return value

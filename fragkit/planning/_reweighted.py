@@ -7,12 +7,12 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Hamiltonian, InputError, TimeModel, as_real_array, feature_count
+from fragkit.core import Hamiltonian, TimeModel, as_real_array, feature_count
 from fragkit.planning._assemble import assemble, weighting_fragments, weighting_promises, with_shots
 from fragkit.planning._budget import Budget
 from fragkit.planning._cost import check_state
 from fragkit.planning._exact import exact_coefficients
-from fragkit.planning._plan import Plan
+from fragkit.planning._plan import Plan, as_plan
 from fragkit.planning._robust import robust_state, share_state
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.states import ReferenceState
@@ -78,9 +78,7 @@ def reweighted(
     True
     """
     began = time.perf_counter()
-    if not isinstance(plan, Plan):
-        raise InputError(f"`plan` must be a Plan (got {type(plan).__name__}); make one with fragkit.plan")
-    plan.check_belongs_to(hamiltonian)
+    as_plan(plan).check_belongs_to(hamiltonian)
     if target_error is None and total_shots is None and seconds is None:
         target_error, total_shots = plan.target_error, None if plan.target_error else plan.total_shots
     budget = Budget(target_error, total_shots, seconds, minimum_shots, time_model)

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Hamiltonian, InputError, TimeModel, as_count
+from fragkit.core import Hamiltonian, InputError, TimeModel, as_count, as_hamiltonian
 from fragkit.planning._assemble import plan_of_design
 from fragkit.planning._budget import Budget
 from fragkit.planning._choose import Design, Settings, design_for
@@ -64,14 +64,14 @@ class TradeOff:
 
     def table(self) -> str:
         """A text table, one row per number of circuits."""
-        rows = [("circuits", "cost / Ha^2", "shots", "error / mHa", "seconds")]
+        from fragkit.report import text_table
+
+        rows = []
         for k, plan in enumerate(self.plans):
             time = "-" if self.seconds is None else f"{self.seconds[k]:.4g}"
             error = f"{1e3 * plan.predicted_error:.3f}"
             rows.append((str(len(plan)), f"{self.cost[k]:.4g}", f"{plan.total_shots:,}", error, time))
-        widths = [max(len(row[c]) for row in rows) for c in range(5)]
-        lines = ["  ".join(cell.rjust(width) for cell, width in zip(row, widths, strict=True)) for row in rows]
-        return "\n".join(lines)
+        return text_table(("circuits", "cost / Ha^2", "shots", "error / mHa", "seconds"), rows)
 
     def plot(self, ax: "Axes | None" = None, *, label: str | None = None) -> "Axes":
         """Cost against number of circuits on the given matplotlib axes or new ones; returns the axes."""
@@ -147,6 +147,7 @@ def trade_off(
     >>> len(curve) in (1, 2)
     True
     """
+    as_hamiltonian(hamiltonian)
     check_state(state, hamiltonian.orbitals, hamiltonian.electrons)
     fewest = least_count(hamiltonian.orbitals)
     if counts is None:

@@ -7,7 +7,7 @@ from typing import Any, Literal
 
 import numpy as np
 
-from fragkit.core import Fragmentation, Hamiltonian, InputError, TimeModel, as_count, as_positive
+from fragkit.core import Fragmentation, Hamiltonian, InputError, TimeModel, as_count, as_hamiltonian, as_positive
 from fragkit.fit import fragment
 from fragkit.planning._assemble import assemble, plan_of_design
 from fragkit.planning._budget import Budget
@@ -140,11 +140,7 @@ def plan(
     (True, True)
     """
     began = time.perf_counter()
-    if not isinstance(hamiltonian, Hamiltonian):
-        raise InputError(
-            f"`hamiltonian` must be a Hamiltonian (got {type(hamiltonian).__name__}); make one with "
-            "fragkit.from_pyscf, fragkit.from_fcidump or fragkit.Hamiltonian"
-        )
+    as_hamiltonian(hamiltonian)
     check_state(state, hamiltonian.orbitals, hamiltonian.electrons)
     budget = Budget(target_error, total_shots, seconds, minimum_shots, time_model)
     planned_on = robust_state(state, planning_noise)

@@ -6,7 +6,16 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Hamiltonian, InputError, MismatchError, as_count, as_real_array, as_rotation, feature_count
+from fragkit.core import (
+    Hamiltonian,
+    InputError,
+    MismatchError,
+    as_count,
+    as_hamiltonian,
+    as_real_array,
+    as_rotation,
+    feature_count,
+)
 from fragkit.states._parallel import available_threads, in_parallel
 
 Array = NDArray[np.float64]
@@ -200,8 +209,7 @@ class ReferenceState(ABC):
         return as_rotation(rotation, self.orbitals)
 
     def _check_hamiltonian(self, hamiltonian: Hamiltonian) -> None:
-        if not isinstance(hamiltonian, Hamiltonian):
-            raise InputError(f"`hamiltonian` must be a Hamiltonian (got {type(hamiltonian).__name__})")
+        as_hamiltonian(hamiltonian)
         if hamiltonian.orbitals != self.orbitals or hamiltonian.electrons != self.electrons:
             raise MismatchError(
                 f"`hamiltonian` must have {self.orbitals} orbitals and electrons {self.electrons} like the state "

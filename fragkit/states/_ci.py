@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Hamiltonian, InputError, as_real_array
+from fragkit.core import Hamiltonian, InputError, as_hamiltonian, as_real_array
 from fragkit.states._assembly import SpinMoments, feature_moments
 from fragkit.states._base import Array, Bits, Expectations, ReferenceState, as_shots, as_weight, seeded
 from fragkit.states._ci_expectations import CIExpectations
@@ -51,8 +51,7 @@ class CIState(ReferenceState):
         cls, hamiltonian: Hamiltonian, vector: Any, *, description: str = "given CI vector"
     ) -> "CIState":
         """The state with the given coefficients, normalised to 1e-6; see `ReferenceState.from_ci_vector`."""
-        if not isinstance(hamiltonian, Hamiltonian):
-            raise InputError(f"`hamiltonian` must be a Hamiltonian (got {type(hamiltonian).__name__})")
+        as_hamiltonian(hamiltonian)
         n, (a, b) = hamiltonian.orbitals, hamiltonian.electrons
         shape = (strings(n, a).count, strings(n, b).count)
         got = np.shape(vector)

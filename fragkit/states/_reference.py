@@ -2,7 +2,7 @@
 
 from typing import Any
 
-from fragkit.core import Hamiltonian, InputError, as_positive
+from fragkit.core import Hamiltonian, InputError, as_hamiltonian, as_positive
 from fragkit.states._base import ReferenceState, as_weight
 from fragkit.states._determinant import DeterminantState
 from fragkit.states._solve import full_ci, singles_and_doubles
@@ -45,9 +45,7 @@ def reference_state(
     >>> round(reference_state(ham, "hf").energy(ham), 6)
     -2.0
     """
-    if not isinstance(hamiltonian, Hamiltonian):
-        kind = type(hamiltonian).__name__
-        raise InputError(f"`hamiltonian` must be a Hamiltonian (got {kind}); make one with a reader such as from_pyscf")
+    as_hamiltonian(hamiltonian)
     weight = as_weight(noise, "noise")
     memory = as_positive(memory, "memory")
     name: Any = method.lower() if isinstance(method, str) else method
