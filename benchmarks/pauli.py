@@ -16,6 +16,7 @@ from pathlib import Path
 import numpy as np
 from pyscf import fci, gto, scf
 
+from fragkit.core import Hamiltonian
 from fragkit.pauli import pauli_costs
 from fragkit.readers import from_pyscf
 from fragkit.states import ReferenceState
@@ -30,12 +31,18 @@ HEADER = (
 )
 
 
-def row(name: str, noise: float) -> str:
+def symmetry_adapted(name: str) -> tuple[Hamiltonian, ReferenceState]:
+    """A molecule with degenerate orbitals turned to symmetry species, and its full CI state."""
     mf = scf.RHF(gto.M(atom=geometry(name), basis="sto-3g", symmetry=True, verbose=0)).run(conv_tol=1e-12)
     ham = from_pyscf(mf)
     integrals = np.array(ham.one_body), np.array(ham.two_body)
     vector = fci.direct_spin1.kernel(*integrals, ham.orbitals, ham.electrons, conv_tol=1e-12)[1]
-    state = ReferenceState.from_ci_vector(ham, vector).with_noise(noise)
+    return ham, ReferenceState.from_ci_vector(ham, vector)
+
+
+def row(name: str, noise: float) -> str:
+    ham, state = symmetry_adapted(name)
+    state = state.with_noise(noise)
     start = time.perf_counter()
     ways = [pauli_costs(ham, state, kind) for kind in ("qubit-wise", "commuting", "overlapping")]
     blocked = pauli_costs(ham, state, "qubit-wise", order="blocked")

@@ -10,11 +10,11 @@ shares for that state). Molecules: STO-3G, every bond 1.0 Å, geometries of the 
 Part "table". "low rank": eigenvectors of the two-electron tensor, coefficients as they are; "+one-body": their linear
 terms divided among the fragments for the least cost; "+ all": all coefficients of least variance on the low-rank
 rotations and the Hamiltonian's own orbitals; "overlapping": commuting groups of Pauli strings with overlaps,
-coefficients divided for the least cost on full CI (`fragkit.pauli`); "plan": optimised rotations, default settings;
-"sharp": the same with less planning noise. "HF": the default plan on the Hartree-Fock state. "1 %": plan made for CISD
-with 1 % noise and four circuits more than the fewest that generic rotations allow, cost on full CI with 1 % noise over
-the quantum limit Var(H). "apart": default plan on CISD + 0.2 × random vector, over that state's Var(H). "seconds": of
-the default plan.
+degenerate orbitals turned to symmetry species, coefficients divided for the least cost on full CI (`fragkit.pauli`);
+"plan": optimised rotations, default settings; "sharp": the same with less planning noise. "HF": the default plan on the
+Hartree-Fock state. "1 %": plan made for CISD with 1 % noise and four circuits more than the fewest that generic
+rotations allow, cost on full CI with 1 % noise over the quantum limit Var(H). "apart": default plan on CISD + 0.2 ×
+random vector, over that state's Var(H). "seconds": of the default plan.
 
 Part "noise": what the noise that is mixed into the reference does, and plans for the bare Hartree-Fock determinant.
 Part "gap": how far plans are from the best with any rotations. Part "time": seconds for 1 mEh in CISD with 0.1 % noise
@@ -41,6 +41,7 @@ from fragkit.states import ReferenceState, reference_state
 
 sys.path.insert(0, str(Path(__file__).parents[1] / "tests"))
 from molecules import full_ci, molecule_hamiltonian
+from pauli import symmetry_adapted
 
 CIRCUITS = {
     "H2": (5,),
@@ -100,7 +101,7 @@ def row(name: str, circuits: int, starts: int, quick: bool) -> str:
     sharp = cisd.with_noise(SHARP_NOISE)
     best = exact_coefficients(hamiltonian, wider, [sharp.moments(u)[1] for u in wider])
     reweighted = best_cost(wider, best.coefficients, true)
-    pauli = pauli_costs(hamiltonian, true, "overlapping").cost if hamiltonian.orbitals <= 8 and not quick else np.nan
+    pauli = np.nan if quick else pauli_costs(*symmetry_adapted(name), "overlapping").cost
     began = time.perf_counter()
     default = plan(hamiltonian, cisd, circuits=circuits, minimum_shots=1, starts=starts)
     seconds = time.perf_counter() - began
