@@ -11,6 +11,10 @@ Array = NDArray[np.float64]
 SINGLE_PRECISION_ROWS = 1000
 """From this many rows on M is factorised in single precision; coefficients are then refined to double precision."""
 
+LARGEST_FACTORISED = 5500
+"""Rows up to which matrices of rows × rows are formed and factorised: 12 orbitals. Beyond that conjugate gradients are
+faster and need little memory."""
+
 _DOUBLE: Any = (blas.dsyrk, lapack.dpotrf, lapack.dpotri, lapack.dpotrs, lapack.dtrtrs)  # pyright: ignore
 _SINGLE: Any = (blas.ssyrk, lapack.spotrf, lapack.spotri, lapack.spotrs, lapack.strtrs)  # pyright: ignore
 

@@ -1,5 +1,6 @@
 """The point a stretch of the optimisation starts from, and exact coefficients at fixed rotations."""
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
@@ -10,7 +11,8 @@ from scipy.linalg import solve_triangular
 from fragkit.core import InputError
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian_covariances import Covariances
-from fragkit.planning._lagrangian_factor import Factor, symmetric_product, working_precision
+from fragkit.planning._lagrangian_factor import LARGEST_FACTORISED, Factor, working_precision
+from fragkit.planning._lagrangian_iterative import least_variance
 
 Array = NDArray[np.float64]
 
@@ -37,6 +39,8 @@ class Refresh:
         (K, F') the z_m of `coefficients`.
     steps
         (K, n(n−1)/2) unit of length of each rotation generator, one over the root of the cost's curvature along it.
+    metric
+        The penalty's metric, N⁻¹ or near it, applied to rows without the shifts.
     """
 
     rotations: Array
@@ -49,11 +53,7 @@ class Refresh:
     unscale: Array
     scaled: Array
     steps: Array
-    _inverse: NDArray[Any]
-
-    def metric(self, rows: Array) -> Array:
-        """The penalty's metric N⁻¹ applied to rows without the shifts."""
-        return symmetric_product(self._inverse, rows)
+    metric: Callable[[Array], Array]
 
 
 @dataclass(frozen=True, eq=False)
@@ -80,16 +80,16 @@ def settle(
         If these rotations cannot reproduce the Hamiltonian.
     """
     count, size, reduced = len(rotations), design.space.size, design.features.shape[1]
+    whiteners = np.stack([whitening(design, covariances, rotation)[0] for rotation in rotations])
+    if size > LARGEST_FACTORISED:
+        return _settled_iteratively(design, covariances, rotations, whiteners, weights, iterations)
     kind = working_precision(size)
     blocks = np.empty((size, count * reduced), dtype=kind, order="F")
-    halves = np.empty((count, reduced, reduced))
     for m, rotation in enumerate(rotations):
-        halves[m] = inverse_root(design, covariances, rotation)
-        blocks[:, m * reduced : (m + 1) * reduced] = design.operators(rotation, halves[m].T)
+        blocks[:, m * reduced : (m + 1) * reduced] = design.operators(rotation, whiteners[m])
     used = np.ones(count)
     for _ in range(iterations):
-        wanted = np.maximum(weights, 1e-2 / count)
-        wanted = wanted / wanted.sum()
+        wanted = _floored(weights)
         blocks *= np.repeat(np.sqrt(wanted / used), reduced).astype(kind)
         used = wanted
         information = Factor(blocks, design.shifts.basis)
@@ -102,17 +102,44 @@ def settle(
         response = (blocks.T @ dual.astype(kind)).astype(np.float64).reshape(count, reduced)
         deviations = np.sqrt(used) * np.linalg.norm(response, axis=1)
         weights = deviations / deviations.sum()
-    scale = np.sqrt(used)[:, None, None] * (design.features @ halves.transpose(0, 2, 1))
+    scale = np.sqrt(used)[:, None, None] * whiteners
     coefficients, left = _refined(design, rotations, scale, response, blocks, information)
+    return _with_cost(covariances, rotations, coefficients, left)
+
+
+def _settled_iteratively(
+    design: DesignMap, covariances: Covariances, rotations: Array, whiteners: Array, weights: Array, iterations: int
+) -> Settled:
+    """The same by conjugate gradients."""
+    dual: Array | None = None
+    for _ in range(iterations):
+        used = _floored(weights)
+        scale = np.sqrt(used)[:, None, None] * whiteners
+        scaled, dual = least_variance(design, rotations, scale, tolerance=1e-12, iterations=1000, start=dual)
+        deviations = np.sqrt(used) * np.linalg.norm(scaled, axis=1)
+        weights = deviations / deviations.sum()
+    coefficients = np.einsum("kfr,kr->kf", scale, scaled)
+    left = float(np.linalg.norm(design.residual(rotations, coefficients)) / np.linalg.norm(design.target))
+    return _with_cost(covariances, rotations, coefficients, left)
+
+
+def _floored(weights: Array) -> Array:
+    """Weights none of which is so small that its circuit could not come back."""
+    floored = np.maximum(weights, 1e-2 / len(weights))
+    return floored / floored.sum()
+
+
+def _with_cost(covariances: Covariances, rotations: Array, coefficients: Array, left: float) -> Settled:
     deviations = np.sqrt(np.maximum(covariances.evaluate(rotations, coefficients)[0], 0.0))
     total = float(deviations.sum())
     return Settled(coefficients, deviations / total, total**2, left)
 
 
-def inverse_root(design: DesignMap, covariances: Covariances, rotation: Array) -> Array:
-    """(F', F') L⁻¹ with C = L Lᵀ the covariance of `design.features` in one rotated basis."""
+def whitening(design: DesignMap, covariances: Covariances, rotation: Array) -> tuple[Array, Array]:
+    """(F, F') combinations of features of unit covariance in one rotated basis, and (F', F) the map back to them."""
     lower = np.linalg.cholesky(design.features.T @ covariances.matrix(rotation) @ design.features)
-    return solve_triangular(lower, np.eye(len(lower)), lower=True, check_finite=False)
+    whitener = solve_triangular(lower, design.features.T, lower=True, check_finite=False).T
+    return whitener, lower.T @ design.features_inverse
 
 
 def _refined(

@@ -12,8 +12,9 @@ from numpy.typing import NDArray
 from fragkit.core import InputError, pair_indices
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian_covariances import Covariances, cayley, variance_curvature
-from fragkit.planning._lagrangian_factor import Factor, working_precision
-from fragkit.planning._lagrangian_refresh import Refresh, inverse_root
+from fragkit.planning._lagrangian_iterative import least_variance
+from fragkit.planning._lagrangian_refresh import Refresh, whitening
+from fragkit.planning._lagrangian_system import system_at
 
 Array = NDArray[np.float64]
 
@@ -22,9 +23,17 @@ EXACT = 1e-11
 
 
 def restore(
-    design: DesignMap, covariances: Covariances, rotations: Array, coefficients: Array, *, iterations: int = 10
+    design: DesignMap,
+    covariances: Covariances,
+    rotations: Array,
+    coefficients: Array,
+    *,
+    dual: Array | None = None,
+    iterations: int = 10,
 ) -> Refresh:
     """Move rotations (K, n, n) and coefficients (K, F) towards exactness; `infeasibility` tells how far it came.
+
+    `dual` is a first guess of the multipliers.
 
     Raises
     ------
@@ -34,33 +43,29 @@ def restore(
     count, n = len(rotations), design.orbitals
     p, q = pair_indices(n, strict=True)
     reduced, norm = design.features.shape[1], float(np.linalg.norm(design.target))
-    split = count * reduced
-    kind = working_precision(design.space.size)
-    matrix = np.empty((design.space.size, split + count * len(p)), dtype=kind, order="F")
     scale = np.empty((count, len(design.features), reduced))
+    unscale = np.empty((count, reduced, len(design.features)))
     residual = design.residual(rotations, coefficients)
     left = float(np.linalg.norm(residual)) / norm
     for _ in range(iterations):
         used, lengths = _lengths(covariances, rotations, coefficients)
         for m, rotation in enumerate(rotations):
-            half = np.sqrt(used[m]) * inverse_root(design, covariances, rotation).T
-            scale[m] = design.features @ half
-            matrix[:, m * reduced : (m + 1) * reduced] = design.operators(rotation, half)
-            turns = slice(split + m * len(p), split + (m + 1) * len(p))
-            matrix[:, turns] = design.turning(rotation, coefficients[m]) * lengths[m]
-        factor = Factor(matrix, design.shifts.basis)
-        if factor.singular:
+            whitener, back = whitening(design, covariances, rotation)
+            scale[m], unscale[m] = np.sqrt(used[m]) * whitener, back / np.sqrt(used[m])
+        system = system_at(design, rotations, coefficients, scale, lengths)
+        if system.singular:
             raise InputError(
                 f"`count` must be larger for {n} orbitals (got {count}): rotations and coefficients together cannot "
                 "reproduce the Hamiltonian"
             )
-        # The factor is used again for as long as it brings the residual down fast.
+        # A system is used again for as long as it brings the residual down fast.
         before, rate = left, 0.0
         while left > EXACT and rate < 0.2:
-            step = (matrix.T @ factor.solve(residual).astype(kind)).astype(np.float64)
-            by_coefficients = np.einsum("kfr,kr->kf", scale, step[:split].reshape(count, reduced))
+            # As accurate as the step is linear, or as the end needs.
+            by_scaled, turns = system.step(residual, tolerance=max(min(0.03, left), 0.3 * EXACT / left))
+            by_coefficients = np.einsum("kfr,kr->kf", scale, by_scaled)
             generators = np.zeros_like(rotations)
-            generators[:, p, q] = step[split:].reshape(count, len(p)) * lengths
+            generators[:, p, q] = turns * lengths
             generators -= generators.transpose(0, 2, 1)
             now, length = np.inf, 2.0
             while now > (1.0 - 0.3 * length) * left and length > 0.1:
@@ -71,19 +76,16 @@ def restore(
             if now > (1.0 - 0.3 * length) * left:
                 break
             (rotations, coefficients), residual, left, rate = moved, moved_residual, now, now / left
+            system = system.near(rotations, coefficients)
         if left <= EXACT or left > 0.9 * before:
             break
     variances, products, turning = covariances.evaluate(rotations, coefficients)
     deviations = np.sqrt(np.maximum(variances, 1e-300))
     total = float(deviations.sum())
     shares = deviations / total
-    unscale: Array = np.asarray(np.linalg.pinv(scale), dtype=np.float64)
     by_scaled = 2.0 * np.einsum("kfr,kf->kr", scale, products) / used[:, None]
     by_turns = turning[:, p, q] / used[:, None] * lengths
-    gradient = np.concatenate([by_scaled.ravel(), by_turns.ravel()]).astype(kind)
-    dual = design.shifts.project(factor.solve((matrix @ gradient).astype(np.float64)))
-    moved_lengths = factor.half_solve(matrix[:, split:]).astype(np.float64)
-    share = np.einsum("rp,rp->p", moved_lengths, moved_lengths).reshape(count, len(p))
+    dual = design.shifts.project(system.multipliers(by_scaled, by_turns, start=dual))
     return Refresh(
         rotations=rotations,
         coefficients=coefficients,
@@ -94,8 +96,8 @@ def restore(
         scale=scale,
         unscale=unscale,
         scaled=np.einsum("krf,kf->kr", unscale, coefficients),
-        steps=lengths / np.sqrt(1.0 + 2.0 * share),
-        _inverse=factor.into_inverse(),
+        steps=lengths / np.sqrt(1.0 + 2.0 * system.turning_shares()),
+        metric=system.into_metric(),
     )
 
 
@@ -111,9 +113,6 @@ def _lengths(covariances: Covariances, rotations: Array, coefficients: Array) ->
 
 def first_coefficients(design: DesignMap, rotations: Array) -> Array:
     """Coefficients (K, F) that come nearest to the Hamiltonian at these rotations, weakly held down."""
-    count, reduced = len(rotations), design.features.shape[1]
-    blocks = np.hstack([design.operators(rotation, np.eye(reduced)) for rotation in rotations])
-    gram = blocks.T @ blocks
-    gram[np.diag_indices_from(gram)] += 1e-3 * np.mean(np.diag(gram))
-    solution = np.linalg.solve(gram, blocks.T @ design.target).reshape(count, reduced)
-    return solution @ design.features.T
+    scale = np.repeat(design.features[None], len(rotations), axis=0)
+    scaled, _ = least_variance(design, rotations, scale, tolerance=1e-6, iterations=300, held=1e-3)
+    return scaled @ design.features.T

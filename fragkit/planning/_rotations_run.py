@@ -13,6 +13,7 @@ from fragkit.planning._counts import least_count
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian import Lagrangian, Point
 from fragkit.planning._lagrangian_covariances import Covariances
+from fragkit.planning._lagrangian_factor import LARGEST_FACTORISED
 from fragkit.planning._lagrangian_refresh import Refresh, settle
 from fragkit.planning._lagrangian_restore import first_coefficients, restore
 from fragkit.planning._rotations_memory import Memory
@@ -40,7 +41,7 @@ class Run:
         weights = np.full(count, 1.0 / count) if shares is None else shares
         # From `least_count` on exact coefficients exist at almost every rotation, and they make the better start.
         self._generic = count >= least_count(n)
-        if self._generic:
+        if self._generic and design.space.size <= LARGEST_FACTORISED:
             coefficients = settle(design, covariances, rotations, weights, iterations=2).coefficients
         else:
             coefficients = first_coefficients(design, rotations)
@@ -73,7 +74,7 @@ class Run:
         rotations = _orthonormal(end.rotations)
         coefficients = np.einsum("kfr,kr->kf", self.current.scale, end.scaled)
         try:
-            new = restore(self._design, self._covariances, rotations, coefficients)
+            new = restore(self._design, self._covariances, rotations, coefficients, dual=self.current.dual)
         except InputError:
             # With very few circuits one that falls out of use takes the last freedom with it.
             if self.best.infeasibility > FEASIBLE:
