@@ -91,7 +91,8 @@ def plan(
         Shots that every circuit gets at least; a few are needed to estimate each circuit's variance.
     time_model
         Times of a device. With it coefficients and shots are chosen for the least time instead of the fewest shots,
-        unless `total_shots` is given. Rotations are those of the fewest shots.
+        unless `total_shots` is given; least in `state` with its planning noise. Rotations are those of the fewest
+        shots.
     circuit_overhead
         For "auto" without a time model: shots that a further circuit is worth. With one, its `switch_seconds` count.
     planning_noise
