@@ -129,20 +129,20 @@ def flipped_calibration(flips: tuple[float, float], qubits: int, shots: int, rng
 @pytest.mark.parametrize("flips", [(0.02, 0.04), (0.05, 0.1)])
 @pytest.mark.parametrize("calibrated", [False, True])
 def test_corrected_energies_are_unbiased(flips: tuple[float, float], calibrated: bool) -> None:
-    """250 experiments on H2, a new calibration of 1,000 shots for each where it is estimated; errors cover it."""
+    """250 experiments on H2, a new calibration of 200 shots for each where it is estimated; errors cover it."""
     plan, state, exact = low_rank_plan("H2", 2000), full_ci_state("H2"), full_ci("H2")[0]
     rng = np.random.default_rng(23)
     known = ReadoutErrors.known(*flips, orbitals=2)
     deviations = []
     for _ in range(250):
-        errors = flipped_calibration(flips, 4, 1000, rng) if calibrated else known
+        errors = flipped_calibration(flips, 4, 200, rng) if calibrated else known
         result = estimate(plan, simulate(plan, state, flips=flips, rng=rng), readout=errors)
         deviations.append((result.energy - exact, result.standard_error, result.calibration_error))
     off, bars, parts = np.array(deviations).T
     assert abs(off.mean()) < 3 * off.std() / np.sqrt(250)
     # The spread of the energies is what the error bars say; its own relative error is 4.5 %.
     assert off.std() == pytest.approx(np.sqrt(np.mean(bars**2)), rel=0.15)
-    assert (parts.mean() > 0.2 * bars.mean()) == calibrated
+    assert (parts.mean() > 0.15 * bars.mean()) == calibrated
 
 
 def test_second_order_bias_of_a_poor_calibration_is_removed() -> None:

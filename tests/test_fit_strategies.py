@@ -8,7 +8,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from molecules import FULL_CI, energy_of, molecule_hamiltonian
 
-from fragkit.core import Fragment, Fragmentation, Hamiltonian, InputError, MismatchError, one_norm
+from fragkit.core import Fragment, Fragmentation, Hamiltonian, InputError, MismatchError, givens_count, one_norm
 from fragkit.fit import Controls, Fit, Greedy, Joint, LowRank, Strategy, fragment
 
 # Symmetric tensors of n orbitals have P(P+1)/2 numbers, P = n(n+1)/2, a fragment has n²: one more fragment than the
@@ -127,6 +127,23 @@ def test_truncated_low_rank_leaves_the_dropped_eigenvalues() -> None:
     assert not fragments.converged
     assert "raise `count`" in fragments.message
     assert fragments.residual_norm == pytest.approx(np.linalg.norm(values[10:]), rel=1e-10)
+
+
+@pytest.mark.parametrize("name", ["LiH", "H2O"])
+def test_low_rank_orbitals_that_count_alike_are_turned_to_the_fewest_gates(name: str) -> None:
+    # Eigenvectors by numpy alone: those of equal eigenvalue, most often zero, come in any orientation.
+    hamiltonian = molecule_hamiltonian(name)
+    n = hamiltonian.orbitals
+    values, vectors = np.linalg.eigh(hamiltonian.two_body.reshape(n * n, n * n))
+    kept = np.flatnonzero(np.abs(values) > 1e-7)[::-1]
+    plain = [np.linalg.eigh(vectors[:, k].reshape(n, n) + vectors[:, k].reshape(n, n).T)[1] for k in kept]
+    fragments = fragment(hamiltonian, LowRank(tol=5e-8))[:-1]
+    assert len(fragments) == len(kept)
+    gates = sum(givens_count(one.rotation, tolerance=1e-8) for one in fragments)
+    assert gates < 0.7 * sum(givens_count(rotation, tolerance=1e-8) for rotation in plain)
+    for one in fragments:
+        spectrum = np.linalg.eigvalsh(one.opposite_spin)
+        assert np.max(np.abs(spectrum[[0, -1]])) == pytest.approx(np.linalg.norm(spectrum), rel=1e-9)  # rank one
 
 
 def test_factors_and_tensor_give_the_same_low_rank_fragments() -> None:

@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 from molecules import FULL_CI, full_ci, molecule_hamiltonian
 
-from fragkit.core import Fragmentation, Hamiltonian, InputError, MismatchError, TimeModel, fragment_tensors
+from fragkit.core import Fragment, Fragmentation, Hamiltonian, InputError, MismatchError, TimeModel, fragment_tensors
 from fragkit.estimate import AdaptiveRun
 from fragkit.fit import LowRank, fragment
 from fragkit.planning import CHEMICAL_ACCURACY, Plan, optimality_gap, plan, plan_cost, reweighted, trade_off
@@ -148,7 +148,7 @@ def test_determinant_reference_is_usable_by_default() -> None:
     from_determinant = plan(hamiltonian, state_of("LiH", "hf"), fragments=rotations)
     from_exact = plan(hamiltonian, state_of("LiH", "fci"), fragments=rotations)
     exact = state_of("LiH", "fci")
-    assert plan_cost(from_determinant, exact) < 2.5 * plan_cost(from_exact, exact)
+    assert plan_cost(from_determinant, exact) < 3.0 * plan_cost(from_exact, exact)
     with pytest.raises(InputError, match="`planning_noise` must be above 0 for a single determinant"):
         plan(hamiltonian, state_of("LiH", "hf"), planning_noise=0.0)
 
@@ -292,6 +292,21 @@ def test_rotations_that_cannot_reproduce_the_hamiltonian_say_so() -> None:
     assert made.residual_norm > 1e-3
     state = random_state(hamiltonian, 0)
     assert abs(planned_energy(made, state) - state.energy(hamiltonian)) <= made.energy_bound
+
+
+def test_low_rank_rotations_are_in_the_orientation_that_serves_other_coefficients() -> None:
+    # The same fragments with orbitals of equal eigenvalue turned at random: the same operators, a dearer plan.
+    hamiltonian, state, rng = molecule_hamiltonian("H2O"), state_of("H2O"), np.random.default_rng(0)
+    turned = []
+    for one in low_rank("H2O")[:-1]:
+        rotation = one.rotation.copy()
+        zero = np.flatnonzero(np.diag(one.opposite_spin) < 1e-14)
+        rotation[:, zero] = rotation[:, zero] @ np.linalg.qr(rng.normal(size=(len(zero),) * 2))[0]
+        turned.append(Fragment.plain(rotation, one.opposite_spin))
+    other = Fragmentation.of(hamiltonian, [*turned, low_rank("H2O")[-1]])
+    assert other.residual_norm < 1e-7
+    ours = plan(hamiltonian, state, fragments=low_rank("H2O"))
+    assert ours.cost < 0.6 * plan(hamiltonian, state, fragments=other).cost
 
 
 def test_fragments_can_start_the_optimisation() -> None:

@@ -5,7 +5,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.core import Hamiltonian, as_count, as_positive
+from fragkit.core import Fragment, Hamiltonian, as_count, as_positive, cheapest_form
 from fragkit.fit._controls import Controls
 from fragkit.fit._fit import Fit
 from fragkit.fit._pairs import pack_symmetric, pair_matrix, unpack_symmetric
@@ -30,6 +30,9 @@ class LowRank:
     Inf. 7, 23 (2021). Tensors that are not positive (attractive lattice models) give negative ε, which is
     allowed. For Hamiltonians given by factors the eigenvectors are found in the span of the factors.
 
+    Orbitals with equal l, most often zero, can be rotated among themselves. They are taken as near to the Hamiltonian's
+    own orbitals as the fewest gates ask for, which is also what other coefficients on these rotations profit from.
+
     Examples
     --------
     >>> import fragkit
@@ -53,6 +56,7 @@ class LowRank:
         above = int(np.count_nonzero(np.abs(values) > 2.0 * self.tol))
         kept = above if self.count is None else min(above, self.count)
         rotations, coefficients = rank_one_fragments(values[:kept], vectors[:, :kept], hamiltonian.orbitals)
+        rotations, coefficients = _fewest_gates(rotations, coefficients)
         dropped = float(np.linalg.norm(values[kept:]))
         controls.update(rotations, coefficients, dropped, 1)
         if kept == above:
@@ -86,3 +90,11 @@ def rank_one_fragments(values: Array, vectors: Array, orbitals: int) -> tuple[Ar
         return np.zeros((0, orbitals, orbitals)), np.zeros((0, orbitals, orbitals))
     diagonals, rotations = np.linalg.eigh(unpack_symmetric(vectors.T, orbitals))
     return rotations, values[:, None, None] * diagonals[:, :, None] * diagonals[:, None, :]
+
+
+def _fewest_gates(rotations: Array, coefficients: Array) -> tuple[Array, Array]:
+    """The same fragments with orbitals that they do not tell apart rotated to the fewest gates."""
+    if len(rotations) == 0:
+        return rotations, coefficients
+    forms = [cheapest_form(Fragment.plain(u, c)) for u, c in zip(rotations, coefficients, strict=True)]
+    return np.stack([form.rotation for form in forms]), np.stack([form.opposite_spin for form in forms])
