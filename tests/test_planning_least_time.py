@@ -1,5 +1,6 @@
 """Coefficients and shots for the least time on a device whose circuits take different times."""
 
+from dataclasses import replace
 from functools import cache
 from itertools import combinations
 
@@ -171,3 +172,13 @@ def test_reweighting_for_time_is_planning_for_time() -> None:
         assert made.predicted_error <= CHEMICAL_ACCURACY
         assert least_time(made) == pytest.approx(least_time(wanted), rel=1e-5)
         assert made.total_shots == pytest.approx(wanted.total_shots, rel=1e-3)
+
+
+def test_slow_changes_of_circuit_make_plans_of_few_circuits() -> None:
+    hamiltonian, state = molecule_hamiltonian("H4"), state_of("H4")
+    slow, quick = (replace(SLOW_LAYERS, switch_seconds=seconds) for seconds in (1e5, 0.0))
+    options = {"circuits": "auto", "maximum_circuits": 10, "max_evaluations": 300, "tolerance": 0.05}
+    few = plan(hamiltonian, state, time_model=slow, **options)
+    many = plan(hamiltonian, state, time_model=quick, **options)
+    assert len(few) <= 8 < len(many) <= 10  # 8: the fewest that generic rotations allow
+    assert few.residual_norm < 1e-9
