@@ -97,6 +97,8 @@ def test_less_time_than_the_coefficients_of_the_fewest_shots_at_the_same_error(n
     hamiltonian, state = molecule_hamiltonian(name), state_of(name)
     fewest, least = planned(name, None), planned(name, SLOW_LAYERS)
     assert least.converged
+    assert "least time" in least.method
+    assert "fewest shots" in fewest.method
     assert least.residual_norm < 1e-9
     assert least.predicted_error <= CHEMICAL_ACCURACY
     # The times differ, and those that decide are those of the compiled circuits.

@@ -93,7 +93,7 @@ def plan_of_design(
         **weighting_promises(design.weighting),
         converged=design.converged,
         message=design.message,
-        method=f"{design.method}, planning noise {noise_of(robust_state(state, planning_noise)):g}",
+        method=f"{design.method}, {budget.goal}, planning noise {noise_of(robust_state(state, planning_noise)):g}",
         seconds=seconds,
     )
 

@@ -66,6 +66,11 @@ class Budget:
         """Whether time, not the number of shots, is what is spent."""
         return self.time_model is not None and self.total_shots is None
 
+    @property
+    def goal(self) -> str:
+        """What coefficients and shots are chosen for, in words."""
+        return "least time" if self.saves_time else "fewest shots"
+
     def shot_weights(self, rotations: Sequence[Array], *, reorder: bool = True) -> Array:
         """(K,) what a shot of each circuit counts where coefficients are chosen: the least Σ σ √weight is wanted.
 

@@ -104,7 +104,7 @@ def reweighted(
     promises = weighting_promises(weighting) | {
         "converged": weighting.converged,
         "message": weighting.message,
-        "method": "least-variance coefficients on the circuits of an earlier plan",
+        "method": f"least-variance coefficients on the circuits of an earlier plan, {budget.goal}",
         "seconds": time.perf_counter() - began,
     }
     fragments = weighting_fragments(rotations, weighting)
