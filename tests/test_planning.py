@@ -1,4 +1,4 @@
-"""The verb `plan`, costs in other states, reweighted plans, the trade-off curve and the optimality gap."""
+"""The verb `plan`, costs in other states, reweighted plans and the trade-off curve."""
 
 from functools import cache
 from math import comb
@@ -12,9 +12,7 @@ from fragkit.core import Fragment, Fragmentation, Hamiltonian, InputError, Misma
 from fragkit.estimate import AdaptiveRun
 from fragkit.fit import LowRank, fragment
 from fragkit.planning import CHEMICAL_ACCURACY, Plan, optimality_gap, plan, plan_cost, reweighted, trade_off
-from fragkit.planning._certificate import PhiSearch
 from fragkit.planning._robust import noise_of, robust_state
-from fragkit.planning._rotations_start import random_rotations
 from fragkit.states import ReferenceState, reference_state
 
 DEVICE = TimeModel(preparation_seconds=1e-4, layer_seconds=1e-5, readout_seconds=1e-5, switch_seconds=0.05)
@@ -394,39 +392,3 @@ def test_trade_off_plot_draws_on_the_given_axes() -> None:
     assert curve.plot(axes, label="H2") is axes
     assert axes.get_xlabel() == "circuits"
     plt.close("all")
-
-
-def test_gradient_of_phi_by_finite_differences() -> None:
-    hamiltonian = molecule_hamiltonian("H4")
-    search = PhiSearch(hamiltonian, state_of("H4").with_noise(1e-2))
-    rng = np.random.default_rng(1)
-    rotations = random_rotations(3, 4, rng)
-    dual = search.projected(rng.normal(size=search.rows))
-    slopes = search.value_and_gradient(rotations, dual)[1]
-    step = rng.normal(size=slopes.shape)
-    ahead, behind = (search.value_and_gradient(search.turned(rotations, h * step), dual)[0] for h in (1e-4, -1e-4))
-    np.testing.assert_allclose((ahead - behind) / 2e-4, np.sum(slopes * step, axis=1), rtol=1e-4)
-
-
-def test_no_plan_is_below_the_bound_over_all_rotations() -> None:
-    hamiltonian, state = molecule_hamiltonian("H2"), state_of("H2")
-    first = optimised("H2")
-    gap = optimality_gap(first, hamiltonian, state, planning_noise=1e-2)
-    assert gap.converged, gap.message
-    assert gap.quantum_limit <= gap.lower_bound <= gap.enlarged_cost * (1 + 1e-6)
-    assert gap.lower_bound <= gap.cost
-    noisy = state.with_noise(1e-2)
-    for count in (3, 6):
-        other = plan(hamiltonian, noisy, circuits=count)
-        assert other.cost >= gap.lower_bound * (1 - 1e-6)
-    attached = gap.attached_to(first)
-    assert attached.bound is not None
-    assert attached.bound.design_limit == gap.lower_bound
-    assert attached.bound.quantum_limit == pytest.approx(state.variance(hamiltonian))
-
-
-def test_gap_that_has_not_closed_says_so() -> None:
-    gap = optimality_gap(optimised("H4"), molecule_hamiltonian("H4"), state_of("H4"), rounds=1, starts=4)
-    assert not gap.converged
-    assert "have not met" in gap.message
-    assert 0 < gap.lower_bound < gap.enlarged_cost <= gap.cost * (1 + 1e-6)
