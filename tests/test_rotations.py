@@ -325,7 +325,7 @@ def test_small_sectors(orbitals: int, electrons: tuple[int, int]) -> None:
     """One electron, one hole, full shells: many operators are constants there."""
     hamiltonian = random_hamiltonian(orbitals, electrons)
     state = reference_state(hamiltonian, "fci", noise=1e-2)
-    found = optimise_rotations(hamiltonian, state, 4, max_evaluations=60)
+    found = optimise_rotations(hamiltonian, state, 5, max_evaluations=60)  # with 4 one start in four succeeds
     assert found.infeasibility < 1e-9
     assert np.all(np.isfinite(found.rotations))
 

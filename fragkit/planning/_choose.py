@@ -11,7 +11,8 @@ from fragkit.core import Fragmentation, Hamiltonian, InputError, feature_count
 from fragkit.fit import Joint, fragment
 from fragkit.planning._budget import Budget
 from fragkit.planning._counts import least_count
-from fragkit.planning._exact import EXACT, Weighting, exact_coefficients
+from fragkit.planning._exact import EXACT, Weighting, exact_coefficients, given_coefficients
+from fragkit.planning._lagrangian_factor import is_factorised
 from fragkit.planning._operators import OperatorSpace
 from fragkit.planning._rotations import RIDGE, RotationDesign, optimise_rotations
 from fragkit.states import ReferenceState
@@ -23,6 +24,9 @@ UNUSED = 1e-5
 
 SPARE = 2
 """Circuits beyond the fewest that reproduce every Hamiltonian with generic rotations; more gain some per cent."""
+
+SPARE_OF_MANY = 0.1
+"""The same as a fraction, beyond 12 orbitals, where conjugate gradients converge the faster the more there are."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -68,7 +72,8 @@ def default_count(orbitals: int, maximum: int | None = None) -> int:
     >>> default_count(7)
     20
     """
-    count = least_count(orbitals) + SPARE
+    least = least_count(orbitals)
+    count = least + (SPARE if orbitals <= 12 else round(SPARE_OF_MANY * least))
     return count if maximum is None else min(count, maximum)
 
 
@@ -86,11 +91,7 @@ def weighted(
     if prune:
         kept = distinct(rotations, 1e-6)
         rotations, start = rotations[kept], None if start is None else start[kept]
-    added = settings.ridge * np.eye(feature_count(hamiltonian.orbitals))
-    weights = settings.budget.shot_weights(list(rotations))
-    covariances = [
-        weight * (planned_on.moments(rotation)[1] + added) for weight, rotation in zip(weights, rotations, strict=True)
-    ]
+    covariances = _covariances(planned_on, rotations, settings)
     found = exact_coefficients(
         hamiltonian, rotations, covariances, shifts=settings.shifts, start=start, tolerance=tolerance
     )
@@ -109,6 +110,15 @@ def weighted(
     if fewer.converged >= found.converged and fewer.cost <= found.cost * (1.0 + 1e-4):
         return rotations[kept], fewer
     return rotations, found
+
+
+def _covariances(planned_on: ReferenceState, rotations: Array, settings: Settings) -> list[Array]:
+    """What coefficients are chosen for: covariances with the ridge, times what a shot of the circuit costs."""
+    added = settings.ridge * np.eye(feature_count(planned_on.orbitals))
+    weights = settings.budget.shot_weights(list(rotations))
+    return [
+        weight * (planned_on.moments(rotation)[1] + added) for weight, rotation in zip(weights, rotations, strict=True)
+    ]
 
 
 def distinct(rotations: Array, tolerance: float) -> NDArray[np.intp]:
@@ -145,16 +155,17 @@ def design_for(
         if count >= least_count(hamiltonian.orbitals):
             raise
         return _fitted(hamiltonian, planned_on, count, settings, error)
-    # Close to the solution the cost converges twice as fast as its lower bound; large factorisations are saved.
-    gap = 1e-5 if hamiltonian.orbitals <= 10 else 1e-3
-    rotations, weighting = weighted(
-        hamiltonian,
-        planned_on,
-        found.rotations,
-        settings,
-        start=found.shares,
-        tolerance=gap,
-    )
+    if not is_factorised(OperatorSpace(hamiltonian.orbitals).size):
+        # The optimisation's coefficients are of least variance to its tolerance; a convex step would gain little more.
+        rotations = found.rotations
+        covariances = _covariances(planned_on, rotations, settings)
+        weighting = given_coefficients(hamiltonian, rotations, found.coefficients, covariances, shifts=settings.shifts)
+    else:
+        # Close to the solution the cost converges twice as fast as its lower bound; large factorisations are saved.
+        gap = 1e-5 if hamiltonian.orbitals <= 10 else 1e-3
+        rotations, weighting = weighted(
+            hamiltonian, planned_on, found.rotations, settings, start=found.shares, tolerance=gap
+        )
     if weighting.relative_residual > EXACT and count < least_count(hamiltonian.orbitals):
         problem = InputError(f"the optimisation ended with a relative residual of {weighting.relative_residual:.2g}")
         return _fitted(hamiltonian, planned_on, count, settings, problem)

@@ -42,7 +42,7 @@ class DesignMap:
 
     `target` are the Hamiltonian's rows. `features` (F, F') is a basis of the combinations of features that are not
     constant in the sector, scaled to unit covariance in the maximally mixed state, whose covariance is `mixed`;
-    `features_inverse` (F', F) is its pseudo-inverse.
+    `features_inverse` (F', F) is its pseudo-inverse, and `constants` a basis of the rest.
     """
 
     def __init__(self, hamiltonian: Hamiltonian) -> None:
@@ -53,7 +53,8 @@ class DesignMap:
         keep = values > 1e-10 * max(values[-1], 1e-300)
         self.features = vectors[:, keep] / np.sqrt(values[keep])
         self.features_inverse = np.sqrt(values[keep])[:, None] * vectors[:, keep].T
-        self.shifts = _completed(self.space, sector_shifts(self.space, hamiltonian.electrons), vectors[:, ~keep])
+        self.constants = vectors[:, ~keep]
+        self.shifts = _completed(self.space, sector_shifts(self.space, hamiltonian.electrons), self.constants)
         self.target = self.shifts.project(self.space.hamiltonian_rows(hamiltonian))
 
     @property

@@ -8,9 +8,12 @@ from numpy.typing import NDArray
 
 from fragkit.core import Hamiltonian, InputError, as_real_array, energy_bound, feature_count, residual_norm
 from fragkit.planning._cone import cone_weights
+from fragkit.planning._design_map import DesignMap
+from fragkit.planning._exact_iterative import constants_for, multiplicative_weights
+from fragkit.planning._lagrangian_factor import is_factorised
 from fragkit.planning._least_variance import Weights, newton_weights
 from fragkit.planning._operators import OperatorSpace
-from fragkit.planning._shifts import no_shifts, sector_shifts
+from fragkit.planning._shifts import Shifts, no_shifts, sector_shifts
 from fragkit.planning._whitened import WhitenedDesign
 
 Array = NDArray[np.float64]
@@ -134,22 +137,96 @@ def exact_coefficients(
     if method not in ("newton", "cone"):
         raise InputError(f"`method` must be 'newton' or 'cone' (got {method!r})")
     space = OperatorSpace(n)
+    if method == "newton" and not is_factorised(space.size):
+        # The multiplicative iteration is slow at the end; the cost is settled long before its bound is.
+        weights = multiplicative_weights(
+            DesignMap(hamiltonian),
+            rotations,
+            checked,
+            start=start,
+            tolerance=max(tolerance, 1e-2),
+            rounds=iterations,
+            report=report,
+        )
+        free, complete = _with_constants(hamiltonian, rotations, weights.coefficients, shifts)
+        return _weighting(
+            hamiltonian,
+            rotations,
+            complete,
+            checked,
+            free,
+            dual=weights.dual,
+            lower_bound=weights.lower_bound,
+            tolerance=max(tolerance, 1e-2),
+            iterations=weights.rounds,
+        )
     free = sector_shifts(space, hamiltonian.electrons) if shifts else no_shifts(space)
-    target = space.hamiltonian_rows(hamiltonian)
-    design = WhitenedDesign(space, rotations, checked, target, free)
+    design = WhitenedDesign(space, rotations, checked, space.hamiltonian_rows(hamiltonian), free)
     if method == "cone":
         found = cone_weights(design, tolerance=0.1 * tolerance)
     else:
         found = newton_weights(design, start=start, tolerance=tolerance, iterations=iterations, report=report)
-    coefficients = _refined(design, found)
-    covariance_products = np.stack([c @ x for c, x in zip(checked, coefficients, strict=True)])
+    return _weighting(
+        hamiltonian,
+        rotations,
+        _refined(design, found),
+        checked,
+        free,
+        dual=design.to_rows(found.dual),
+        lower_bound=found.lower_bound,
+        tolerance=tolerance,
+        iterations=found.iterations,
+    )
+
+
+def given_coefficients(
+    hamiltonian: Hamiltonian, rotations: Array, coefficients: Array, covariances: Sequence[Array], *, shifts: bool
+) -> Weighting:
+    """Coefficients (K, F) that equal the Hamiltonian up to operators constant in the sector, as they are.
+
+    Nothing is known of how near they are to the least cost on these rotations: the lower bound is zero.
+    """
+    free, complete = _with_constants(hamiltonian, rotations, coefficients, shifts)
+    zero = np.zeros(OperatorSpace(hamiltonian.orbitals).size)
+    return _weighting(
+        hamiltonian, rotations, complete, covariances, free, dual=zero, lower_bound=0.0, tolerance=1.0, iterations=0
+    )
+
+
+def _with_constants(
+    hamiltonian: Hamiltonian, rotations: Array, coefficients: Array, shifts: bool
+) -> tuple[Shifts, Array]:
+    """The shifts allowed, and coefficients that are exact up to these and no longer up to other constants."""
+    design = DesignMap(hamiltonian)
+    space = design.space
+    free = sector_shifts(space, hamiltonian.electrons) if shifts else no_shifts(space)
+    left = space.hamiltonian_rows(hamiltonian) - space.apply(space.pair_columns(rotations), rotations, coefficients)
+    return free, coefficients + constants_for(design, rotations, left, free)
+
+
+def _weighting(
+    hamiltonian: Hamiltonian,
+    rotations: Array,
+    coefficients: Array,
+    covariances: Sequence[Array],
+    free: Shifts,
+    *,
+    dual: Array,
+    lower_bound: float,
+    tolerance: float,
+    iterations: int,
+) -> Weighting:
+    """The result for coefficients that equal the Hamiltonian up to the shifts `free`."""
+    space = OperatorSpace(hamiltonian.orbitals)
+    target = space.hamiltonian_rows(hamiltonian)
+    covariance_products = np.stack([c @ x for c, x in zip(covariances, coefficients, strict=True)])
     deviations = np.sqrt(np.maximum(np.einsum("kf,kf->k", coefficients, covariance_products), 0.0))
-    left, constant = free.split(target - space.apply(design.columns, rotations, coefficients))
+    left, constant = free.split(target - space.apply(space.pair_columns(rotations), rotations, coefficients))
     tensors = space.tensors(left)
     size = float(np.linalg.norm(target))
     relative = float(np.linalg.norm(left)) / size if size else 0.0
     total = float(np.sum(deviations))
-    gap = total**2 - found.lower_bound
+    gap = total**2 - lower_bound
     exact = relative <= EXACT
     settled = gap <= 2.0 * tolerance * total**2 or total**2 <= 1e-18
     return Weighting(
@@ -160,11 +237,11 @@ def exact_coefficients(
         residual_norm=residual_norm(tensors),
         energy_bound=energy_bound(tensors, hamiltonian.electrons),
         relative_residual=relative,
-        lower_bound=found.lower_bound,
-        dual=design.to_rows(found.dual),
-        sector_exact=shifts,
+        lower_bound=lower_bound,
+        dual=dual,
+        sector_exact=len(free.values) > 0,
         converged=bool(exact and settled),
-        message=_message(relative, exact, settled, gap, total**2, found.iterations),
+        message=_message(relative, exact, settled, gap, total**2, iterations),
     )
 
 
@@ -197,7 +274,7 @@ def _message(relative: float, exact: bool, settled: bool, gap: float, cost: floa
     if not settled:
         parts.append(
             f"The cost is within {gap / cost:.2g} (relative) of its least value for these rotations after {iterations} "
-            "iterations; raise `iterations`."
+            "iterations."
         )
     if not parts:
         parts.append(f"Least-variance coefficients found in {iterations} iterations.")

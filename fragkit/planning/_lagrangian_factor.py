@@ -15,6 +15,12 @@ LARGEST_FACTORISED = 5500
 """Rows up to which matrices of rows × rows are formed and factorised: 12 orbitals. Beyond that conjugate gradients are
 faster and need little memory."""
 
+
+def is_factorised(rows: int) -> bool:
+    """Whether matrices of rows × rows are formed for so many operator rows."""
+    return rows <= LARGEST_FACTORISED
+
+
 _DOUBLE: Any = (blas.dsyrk, lapack.dpotrf, lapack.dpotri, lapack.dpotrs, lapack.dtrtrs)  # pyright: ignore
 _SINGLE: Any = (blas.ssyrk, lapack.spotrf, lapack.spotri, lapack.spotrs, lapack.strtrs)  # pyright: ignore
 

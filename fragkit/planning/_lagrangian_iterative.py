@@ -150,6 +150,6 @@ def solved(
 ) -> Array:
     """x with M x near `wanted`, to `tolerance` relative or as near as so many conjugate-gradient iterations come."""
     shape = (len(wanted), len(wanted))
-    matrix = LinearOperator(shape, matvec=apply, dtype=np.float64)
-    inverse = LinearOperator(shape, matvec=precondition, dtype=np.float64)
+    matrix = LinearOperator(shape, matvec=apply, dtype=np.float64)  # pyright: ignore[reportCallIssue]
+    inverse = LinearOperator(shape, matvec=precondition, dtype=np.float64)  # pyright: ignore[reportCallIssue]
     return cg(matrix, wanted, start, rtol=tolerance, maxiter=iterations, M=inverse)[0]

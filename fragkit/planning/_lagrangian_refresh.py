@@ -11,8 +11,7 @@ from scipy.linalg import solve_triangular
 from fragkit.core import InputError
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian_covariances import Covariances
-from fragkit.planning._lagrangian_factor import LARGEST_FACTORISED, Factor, working_precision
-from fragkit.planning._lagrangian_iterative import least_variance
+from fragkit.planning._lagrangian_factor import Factor, working_precision
 
 Array = NDArray[np.float64]
 
@@ -81,15 +80,14 @@ def settle(
     """
     count, size, reduced = len(rotations), design.space.size, design.features.shape[1]
     whiteners = np.stack([whitening(design, covariances, rotation)[0] for rotation in rotations])
-    if size > LARGEST_FACTORISED:
-        return _settled_iteratively(design, covariances, rotations, whiteners, weights, iterations)
     kind = working_precision(size)
     blocks = np.empty((size, count * reduced), dtype=kind, order="F")
     for m, rotation in enumerate(rotations):
         blocks[:, m * reduced : (m + 1) * reduced] = design.operators(rotation, whiteners[m])
     used = np.ones(count)
     for _ in range(iterations):
-        wanted = _floored(weights)
+        wanted = np.maximum(weights, 1e-2 / count)
+        wanted = wanted / wanted.sum()
         blocks *= np.repeat(np.sqrt(wanted / used), reduced).astype(kind)
         used = wanted
         information = Factor(blocks, design.shifts.basis)
@@ -104,32 +102,6 @@ def settle(
         weights = deviations / deviations.sum()
     scale = np.sqrt(used)[:, None, None] * whiteners
     coefficients, left = _refined(design, rotations, scale, response, blocks, information)
-    return _with_cost(covariances, rotations, coefficients, left)
-
-
-def _settled_iteratively(
-    design: DesignMap, covariances: Covariances, rotations: Array, whiteners: Array, weights: Array, iterations: int
-) -> Settled:
-    """The same by conjugate gradients."""
-    dual: Array | None = None
-    for _ in range(iterations):
-        used = _floored(weights)
-        scale = np.sqrt(used)[:, None, None] * whiteners
-        scaled, dual = least_variance(design, rotations, scale, tolerance=1e-12, iterations=1000, start=dual)
-        deviations = np.sqrt(used) * np.linalg.norm(scaled, axis=1)
-        weights = deviations / deviations.sum()
-    coefficients = np.einsum("kfr,kr->kf", scale, scaled)
-    left = float(np.linalg.norm(design.residual(rotations, coefficients)) / np.linalg.norm(design.target))
-    return _with_cost(covariances, rotations, coefficients, left)
-
-
-def _floored(weights: Array) -> Array:
-    """Weights none of which is so small that its circuit could not come back."""
-    floored = np.maximum(weights, 1e-2 / len(weights))
-    return floored / floored.sum()
-
-
-def _with_cost(covariances: Covariances, rotations: Array, coefficients: Array, left: float) -> Settled:
     deviations = np.sqrt(np.maximum(covariances.evaluate(rotations, coefficients)[0], 0.0))
     total = float(deviations.sum())
     return Settled(coefficients, deviations / total, total**2, left)
@@ -137,7 +109,8 @@ def _with_cost(covariances: Covariances, rotations: Array, coefficients: Array, 
 
 def whitening(design: DesignMap, covariances: Covariances, rotation: Array) -> tuple[Array, Array]:
     """(F, F') combinations of features of unit covariance in one rotated basis, and (F', F) the map back to them."""
-    lower = np.linalg.cholesky(design.features.T @ covariances.matrix(rotation) @ design.features)
+    covariance = design.features.T @ covariances.matrix(rotation) @ design.features
+    lower = np.asarray(np.linalg.cholesky(covariance), dtype=np.float64)
     whitener = solve_triangular(lower, design.features.T, lower=True, check_finite=False).T
     return whitener, lower.T @ design.features_inverse
 

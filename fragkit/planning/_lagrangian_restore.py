@@ -12,14 +12,16 @@ from numpy.typing import NDArray
 from fragkit.core import InputError, pair_indices
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian_covariances import Covariances, cayley, variance_curvature
+from fragkit.planning._lagrangian_factor import is_factorised
 from fragkit.planning._lagrangian_iterative import least_variance
 from fragkit.planning._lagrangian_refresh import Refresh, whitening
 from fragkit.planning._lagrangian_system import system_at
 
 Array = NDArray[np.float64]
 
+HELD = 1e-3  # weight of the first coefficients' own size, so that few circuits do not start from large ones
 EXACT = 1e-11
-"""Relative residual at which no further step is taken."""
+"""Relative residual of coefficients that need no further step."""
 
 
 def restore(
@@ -28,12 +30,13 @@ def restore(
     rotations: Array,
     coefficients: Array,
     *,
+    exact: float = EXACT,
     dual: Array | None = None,
     iterations: int = 10,
 ) -> Refresh:
     """Move rotations (K, n, n) and coefficients (K, F) towards exactness; `infeasibility` tells how far it came.
 
-    `dual` is a first guess of the multipliers.
+    No further step is taken at a relative residual of `exact`; `dual` is a first guess of the multipliers.
 
     Raises
     ------
@@ -60,9 +63,9 @@ def restore(
             )
         # A system is used again for as long as it brings the residual down fast.
         before, rate = left, 0.0
-        while left > EXACT and rate < 0.2:
+        while left > exact and rate < 0.2:
             # As accurate as the step is linear, or as the end needs.
-            by_scaled, turns = system.step(residual, tolerance=max(min(0.03, left), 0.3 * EXACT / left))
+            by_scaled, turns = system.step(residual, tolerance=max(min(0.03, left), 0.3 * exact / left))
             by_coefficients = np.einsum("kfr,kr->kf", scale, by_scaled)
             generators = np.zeros_like(rotations)
             generators[:, p, q] = turns * lengths
@@ -77,7 +80,7 @@ def restore(
                 break
             (rotations, coefficients), residual, left, rate = moved, moved_residual, now, now / left
             system = system.near(rotations, coefficients)
-        if left <= EXACT or left > 0.9 * before:
+        if left <= exact or left > 0.9 * before:
             break
     variances, products, turning = covariances.evaluate(rotations, coefficients)
     deviations = np.sqrt(np.maximum(variances, 1e-300))
@@ -113,6 +116,13 @@ def _lengths(covariances: Covariances, rotations: Array, coefficients: Array) ->
 
 def first_coefficients(design: DesignMap, rotations: Array) -> Array:
     """Coefficients (K, F) that come nearest to the Hamiltonian at these rotations, weakly held down."""
-    scale = np.repeat(design.features[None], len(rotations), axis=0)
-    scaled, _ = least_variance(design, rotations, scale, tolerance=1e-6, iterations=300, held=1e-3)
+    count, reduced = len(rotations), design.features.shape[1]
+    if is_factorised(design.space.size):
+        blocks = np.hstack([design.operators(rotation, design.features) for rotation in rotations])
+        gram = blocks.T @ blocks
+        gram[np.diag_indices_from(gram)] += HELD * np.mean(np.diag(gram))
+        scaled = np.linalg.solve(gram, blocks.T @ design.target).reshape(count, reduced)
+    else:
+        scale = np.repeat(design.features[None], count, axis=0)
+        scaled, _ = least_variance(design, rotations, scale, tolerance=1e-4, iterations=200, held=HELD)
     return scaled @ design.features.T

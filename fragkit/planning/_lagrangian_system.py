@@ -12,7 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.planning._design_map import DesignMap
-from fragkit.planning._lagrangian_factor import LARGEST_FACTORISED, Factor, symmetric_product, working_precision
+from fragkit.planning._lagrangian_factor import Factor, is_factorised, symmetric_product, working_precision
 from fragkit.planning._lagrangian_iterative import IterativeSystem
 
 Array = NDArray[np.float64]
@@ -50,7 +50,7 @@ class System(Protocol):
 
 def system_at(design: DesignMap, rotations: Array, coefficients: Array, scale: Array, lengths: Array) -> System:
     """The system for c_m = scale_m z_m, scale (K, F, F'), and generators X = lengths · x, lengths (K, n(n−1)/2)."""
-    kind = FactorisedSystem if design.space.size <= LARGEST_FACTORISED else IterativeSystem
+    kind = FactorisedSystem if is_factorised(design.space.size) else IterativeSystem
     return kind(design, rotations, coefficients, scale, lengths)
 
 

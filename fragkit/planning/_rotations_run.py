@@ -13,9 +13,9 @@ from fragkit.planning._counts import least_count
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian import Lagrangian, Point
 from fragkit.planning._lagrangian_covariances import Covariances
-from fragkit.planning._lagrangian_factor import LARGEST_FACTORISED
+from fragkit.planning._lagrangian_factor import is_factorised
 from fragkit.planning._lagrangian_refresh import Refresh, settle
-from fragkit.planning._lagrangian_restore import first_coefficients, restore
+from fragkit.planning._lagrangian_restore import EXACT, first_coefficients, restore
 from fragkit.planning._rotations_memory import Memory
 
 Array = NDArray[np.float64]
@@ -26,11 +26,12 @@ MULTIPLIER_INTERVAL = 15  # steps between updates of the multipliers
 FIRST_PENALTY = 1.5  # κ; the multipliers converge for κ above about 1/2, the steps are longer for small κ
 LARGEST_PENALTY = 50.0
 FEASIBLE = 1e-9  # relative residual of a refresh that counts as exact
+ROUGH = 1e-6  # and of one between whiles where every digit costs conjugate-gradient iterations
 SMALL = 1200  # rows up to which a refresh is cheap beside the steps between two of them
 
 
 class Run:
-    """The state of one descent; `best` is the refresh of lowest cost so far, always exact."""
+    """The state of one descent; `best` is the refresh of lowest cost so far, exact or, of many orbitals, nearly so."""
 
     def __init__(
         self, design: DesignMap, covariances: Covariances, rotations: Array, shares: Array | None = None
@@ -40,12 +41,14 @@ class Run:
         count, n = len(rotations), design.orbitals
         weights = np.full(count, 1.0 / count) if shares is None else shares
         # From `least_count` on exact coefficients exist at almost every rotation, and they make the better start.
-        self._generic = count >= least_count(n)
-        if self._generic and design.space.size <= LARGEST_FACTORISED:
+        self._factorised = is_factorised(design.space.size)
+        self._exact, self._feasible = (EXACT, FEASIBLE) if self._factorised else (ROUGH, 3.0 * ROUGH)
+        self._generic = self._factorised and count >= least_count(n)
+        if self._generic:
             coefficients = settle(design, covariances, rotations, weights, iterations=2).coefficients
         else:
             coefficients = first_coefficients(design, rotations)
-        self.current = self.best = restore(design, covariances, rotations, coefficients)
+        self.current = self.best = restore(design, covariances, rotations, coefficients, exact=self._exact)
         self._memory = Memory(MEMORY, count * (n * (n - 1) // 2 + design.features.shape[1]))
         self._penalty = FIRST_PENALTY
         self.evaluations = 0
@@ -55,13 +58,20 @@ class Run:
     @property
     def natural_steps(self) -> int:
         """Steps until the next refresh: few while the scaling changes fast, more where a refresh is dear."""
+        if not self._factorised:
+            return min(400, 60 * len(self.history))
         longest = 80 if self._design.space.size < SMALL else 160
         if len(self.history) > 1 and self.history[-1][1] > 0.98 * self.history[-2][1]:
             longest *= 2
         return min(longest, 20 + 15 * (len(self.history) - 1))
 
     def recent_fall(self, window: int) -> float | None:
-        """Relative fall of the best cost over the last `window` evaluations, or None while there were fewer."""
+        """Relative fall of the best cost over the last `window` evaluations, or None while there were fewer.
+
+        Where refreshes are rare, over at least the last two of them: a single one can be unlucky.
+        """
+        if not self._factorised and len(self.history) > 2:
+            window = max(window, self.evaluations - self.history[-3][0])
         earlier = [cost for spent, cost in self.history if spent <= self.evaluations - window]
         return 1.0 - self.best.cost / min(earlier) if earlier else None
 
@@ -74,16 +84,18 @@ class Run:
         rotations = _orthonormal(end.rotations)
         coefficients = np.einsum("kfr,kr->kf", self.current.scale, end.scaled)
         try:
-            new = restore(self._design, self._covariances, rotations, coefficients, dual=self.current.dual)
+            new = restore(
+                self._design, self._covariances, rotations, coefficients, exact=self._exact, dual=self.current.dual
+            )
         except InputError:
             # With very few circuits one that falls out of use takes the last freedom with it.
-            if self.best.infeasibility > FEASIBLE:
+            if self.best.infeasibility > self._feasible:
                 raise
             self.stuck = True
             return
         self.history.append((self.evaluations, new.cost))
-        worse = new.cost > 1.02 * self.best.cost or new.infeasibility > FEASIBLE
-        if worse and self.best.infeasibility <= FEASIBLE:
+        worse = new.cost > 1.02 * self.best.cost or new.infeasibility > self._feasible
+        if worse and self.best.infeasibility <= self._feasible:
             # Too soft a penalty lets rotations run ahead of feasibility.
             self.stuck = self._penalty >= LARGEST_PENALTY
             self._penalty = min(2.0 * self._penalty, LARGEST_PENALTY)
@@ -92,11 +104,14 @@ class Run:
             return
         self._carry_over(self.current, new)
         self.current = new
-        if self.best.infeasibility > FEASIBLE or new.cost < self.best.cost:
+        if self.best.infeasibility > self._feasible or new.cost < self.best.cost:
             self.best = new
 
     def finish(self) -> Refresh:
-        """The best refresh, with coefficients of least variance for its rotations where these alone are exact."""
+        """The best refresh, exact, with coefficients of least variance for its rotations where that is cheap."""
+        if not self._factorised:
+            best = self.best
+            self.best = restore(self._design, self._covariances, best.rotations, best.coefficients, dual=best.dual)
         if self._generic:
             found = settle(self._design, self._covariances, self.best.rotations, self.best.shares, iterations=2)
             if found.cost < self.best.cost and found.infeasibility <= FEASIBLE:
