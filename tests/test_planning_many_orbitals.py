@@ -8,6 +8,7 @@ from molecules import molecule_hamiltonian
 
 from fragkit import hubbard
 from fragkit.core import Hamiltonian, InputError, fragment_tensors
+from fragkit.fit import fragment
 from fragkit.planning import _lagrangian_factor as factor_module
 from fragkit.planning import exact_coefficients, plan, plan_cost
 from fragkit.planning._design_map import DesignMap
@@ -160,3 +161,17 @@ def test_thirteen_sites_from_a_determinant() -> None:
     assert not made.converged
     assert "still falling" in made.message
     assert state.variance(hamiltonian) < plan_cost(made, state)
+
+
+def test_too_little_memory_is_said_before_the_work_begins() -> None:
+    hamiltonian = hubbard(13, hopping=1.0, repulsion=4.0, electrons=(6, 6), periodic=True)
+    state = reference_state(hamiltonian, "hf")
+    for work in (
+        lambda: plan(hamiltonian, state, memory=1e8),
+        lambda: plan(hamiltonian, state, fragments=fragment(hamiltonian), memory=1e7),
+        lambda: exact_coefficients(hamiltonian, np.stack([np.eye(13)] * 9), [np.eye(182)] * 9, memory=1e7),
+    ):
+        with pytest.raises(
+            InputError, match=r"`memory` must be larger for \d+ circuits of 13 orbitals .*smaller active"
+        ):
+            work()

@@ -13,6 +13,7 @@ from fragkit.planning._budget import Budget
 from fragkit.planning._counts import least_count
 from fragkit.planning._exact import EXACT, Weighting, exact_coefficients, given_coefficients
 from fragkit.planning._lagrangian_factor import is_factorised
+from fragkit.planning._memory import MEMORY
 from fragkit.planning._operators import OperatorSpace
 from fragkit.planning._rotations import RIDGE, RotationDesign, optimise_rotations
 from fragkit.states import ReferenceState
@@ -43,6 +44,7 @@ class Settings:
     checkpoint: str | os.PathLike[str] | None = None
     resume: bool = False
     ridge: float = 0.0
+    memory: float = MEMORY
 
 
 @dataclass(frozen=True, eq=False)
@@ -93,7 +95,13 @@ def weighted(
         rotations, start = rotations[kept], None if start is None else start[kept]
     covariances = _covariances(planned_on, rotations, settings)
     found = exact_coefficients(
-        hamiltonian, rotations, covariances, shifts=settings.shifts, start=start, tolerance=tolerance
+        hamiltonian,
+        rotations,
+        covariances,
+        shifts=settings.shifts,
+        start=start,
+        tolerance=tolerance,
+        memory=settings.memory,
     )
     used = found.shares > UNUSED
     if not prune or np.all(used) or not np.any(used):
@@ -106,6 +114,7 @@ def weighted(
         shifts=settings.shifts,
         start=found.shares[kept],
         tolerance=tolerance,
+        memory=settings.memory,
     )
     if fewer.converged >= found.converged and fewer.cost <= found.cost * (1.0 + 1e-4):
         return rotations[kept], fewer
@@ -196,6 +205,7 @@ def _optimised(
         checkpoint=settings.checkpoint,
         resume=settings.resume,
         on_interrupt="return",
+        memory=settings.memory,
     )
 
 

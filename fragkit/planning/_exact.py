@@ -12,6 +12,7 @@ from fragkit.planning._design_map import DesignMap
 from fragkit.planning._exact_iterative import constants_for, multiplicative_weights
 from fragkit.planning._lagrangian_factor import is_factorised
 from fragkit.planning._least_variance import Weights, newton_weights
+from fragkit.planning._memory import MEMORY, require_memory
 from fragkit.planning._operators import OperatorSpace
 from fragkit.planning._shifts import Shifts, no_shifts, sector_shifts
 from fragkit.planning._whitened import WhitenedDesign
@@ -80,6 +81,7 @@ def exact_coefficients(
     iterations: int = 60,
     method: str = "newton",
     report: Callable[[float], None] | None = None,
+    memory: float = MEMORY,
 ) -> Weighting:
     """The globally least-variance exact coefficients and shot shares for given rotations.
 
@@ -107,11 +109,14 @@ def exact_coefficients(
         "newton", or "cone" for the cone programme as it stands, by a general solver: slow, for checks.
     report
         Called with the cost in each Newton step.
+    memory
+        Bytes that may be used; more are refused before the work begins.
 
     Raises
     ------
     InputError
-        If a shape is wrong or an entry is not finite.
+        If a shape is wrong or an entry is not finite, if more `memory` is needed, or if, beyond 12 orbitals, a
+        covariance is singular apart from features that are constant in the sector.
 
     Examples
     --------
@@ -129,6 +134,7 @@ def exact_coefficients(
     n = hamiltonian.orbitals
     rotations = as_real_array(rotations, "rotations", (None, n, n))
     features = feature_count(n)
+    require_memory(n, len(rotations), memory)
     if len(covariances) != len(rotations):
         raise InputError(f"`covariances` must be {len(rotations)}, one for each rotation (got {len(covariances)})")
     checked = [as_real_array(c, f"covariances[{m}]", (features, features)) for m, c in enumerate(covariances)]

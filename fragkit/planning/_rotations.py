@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from fragkit.core import Hamiltonian, InputError, as_count, as_positive
 from fragkit.planning._design_map import DesignMap
 from fragkit.planning._lagrangian_covariances import Covariances
+from fragkit.planning._memory import MEMORY, require_memory
 from fragkit.planning._rotations_file import RotationsFile
 from fragkit.planning._rotations_run import FEASIBLE, Run
 from fragkit.planning._rotations_start import starting_rotations
@@ -78,6 +79,7 @@ def optimise_rotations(
     checkpoint: str | os.PathLike[str] | None = None,
     resume: bool = False,
     on_interrupt: OnInterrupt = "raise",
+    memory: float = MEMORY,
 ) -> RotationDesign:
     """Find rotations, coefficients and shot shares with the least cost (Σσ)², exact at every refresh.
 
@@ -119,11 +121,14 @@ def optimise_rotations(
         Go on from `checkpoint`.
     on_interrupt
         What Ctrl-C does: "raise" lets KeyboardInterrupt through, "return" gives the best so far, not converged.
+    memory
+        Bytes that may be used; more are refused before the work begins.
 
     Raises
     ------
     InputError
-        If an argument is not what it must be, or `count` is too small to reproduce the Hamiltonian.
+        If an argument is not what it must be, `count` is too small to reproduce the Hamiltonian, or more
+        `memory` is needed.
     MismatchError
         If the checkpoint belongs to another problem.
 
@@ -144,6 +149,7 @@ def optimise_rotations(
     if on_interrupt not in get_args(OnInterrupt):
         raise InputError(f"`on_interrupt` must be 'raise' or 'return' (got {on_interrupt!r})")
     n = hamiltonian.orbitals
+    require_memory(n, count, memory)
     began = time.perf_counter()
     generator = np.random.default_rng(rng)
     file = None if checkpoint is None else RotationsFile(checkpoint, hamiltonian.digest, state.digest)

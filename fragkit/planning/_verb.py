@@ -23,6 +23,7 @@ from fragkit.planning._choose import (
 from fragkit.planning._cost import check_state
 from fragkit.planning._counts import least_count
 from fragkit.planning._exact import EXACT
+from fragkit.planning._memory import MEMORY
 from fragkit.planning._plan import Plan
 from fragkit.planning._robust import robust_state, share_state
 from fragkit.planning._rotations import as_ridge
@@ -56,6 +57,7 @@ def plan(
     progress: bool = False,
     checkpoint: str | os.PathLike[str] | None = None,
     resume: bool = False,
+    memory: float = MEMORY,
 ) -> Plan:
     """Choose circuits, coefficients and shots so that the energy has the smallest error in the expected state.
 
@@ -69,10 +71,10 @@ def plan(
     state
         The expected state, from `reference_state`.
     circuits
-        Number of circuits. None takes two more than the fewest with which generic rotations reproduce the Hamiltonian,
-        ⌈(n+1)(n+2)/4⌉ + 2. "auto" looks for the number from which on a further circuit costs more than the shots it
-        saves; "minimal" takes the fewest with which a fit reproduces the Hamiltonian, at up to 100 times the shots.
-        Circuits that need no shots are left out.
+        Number of circuits. None takes two more (beyond 12 orbitals a tenth more) than ⌈(n+1)(n+2)/4⌉, the fewest with
+        which generic rotations reproduce the Hamiltonian. "auto" looks for the number from which on a further circuit
+        costs more than the shots it saves; "minimal" takes the fewest with which a fit reproduces the Hamiltonian, at
+        up to 100 times the shots. Circuits that need no shots are left out.
     fragments
         Measure the rotations of this fragmentation; together with `circuits`, start the optimisation from them.
     reweight
@@ -111,6 +113,8 @@ def plan(
         Show a bar with the current cost.
     checkpoint, resume
         File (.npz) that keeps the best rotations so far, and whether to go on from it.
+    memory
+        Bytes that planning may use; a plan that needs more is refused before the work begins.
 
     Returns
     -------
@@ -122,7 +126,8 @@ def plan(
     Raises
     ------
     InputError
-        If an argument is not what it must be, or a budget is too small for the minimum of every circuit.
+        If an argument is not what it must be, a budget is too small for the minimum of every circuit, or more `memory`
+        is needed.
     MismatchError
         If `state`, `fragments` or the checkpoint belong to another Hamiltonian.
 
@@ -165,6 +170,7 @@ def plan(
         checkpoint=checkpoint,
         resume=resume,
         ridge=as_ridge(ridge),
+        memory=as_positive(memory, "memory"),
     )
     limit = None if maximum_circuits is None else as_count(maximum_circuits, "maximum_circuits", minimum=1)
     if isinstance(circuits, str) and fragments is not None:
