@@ -13,13 +13,13 @@ from fragkit.planning._whitened import WhitenedDesign
 
 Array = NDArray[np.float64]
 
-ACTIVE = 0.95
+ACTIVE = 0.985
 """Value of φ from which on a rotation stays in the design."""
 
 UNUSED = 1e-4
 """A rotation with fewer of the shots than this leaves the design if its φ is small."""
 
-WEIGHT_TOLERANCE = 1e-4
+WEIGHT_TOLERANCE = 5e-4
 """Relative distance from the best weights at which the solution for given rotations ends."""
 
 
