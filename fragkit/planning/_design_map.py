@@ -111,15 +111,19 @@ def _completed(space: OperatorSpace, shifts: Shifts, constants: Array) -> Shifts
     """
     rng = np.random.default_rng(0)
     basis = shifts.basis
+    complete = False
     for _ in range(space.orbitals + 2):
         rotation = np.linalg.qr(rng.standard_normal((space.orbitals,) * 2))[0]
         missing = space.dense(space.pair_columns(rotation), rotation) @ constants
         for _ in range(2):
             missing -= basis @ (basis.T @ missing)
-        if np.max(np.abs(missing), initial=0.0) < 1e-9:
+        complete = bool(np.max(np.abs(missing), initial=0.0) < 1e-9)
+        if complete:
             break
         left, singular, _ = np.linalg.svd(missing, full_matrices=False)
         basis = np.hstack([basis, left[:, singular > 1e-9]])
+    if basis is shifts.basis and complete:
+        return shifts
     # Values of the additional operators are not needed here: they drop out of every residual.
     values = np.zeros(basis.shape[1])
     values[: len(shifts.values)] = shifts.values

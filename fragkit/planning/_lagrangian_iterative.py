@@ -7,6 +7,7 @@ are exact, and hardly on the number of orbitals.
 """
 
 from collections.abc import Callable
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -27,7 +28,10 @@ MOST_ITERATIONS = 400
 
 
 class IterativeSystem:
-    """N applied, never formed; its diagonal, estimated with random vectors, preconditions and is the metric."""
+    """N applied, never formed; its diagonal, estimated with random vectors, preconditions and is the metric.
+
+    In single precision: a step that is not exact yet is followed by another, for the residual in double precision.
+    """
 
     singular = False
 
@@ -36,13 +40,14 @@ class IterativeSystem:
         design: DesignMap,
         rotations: Array,
         coefficients: Array,
-        scale: Array,
+        scale: NDArray[Any],
         lengths: Array,
         precondition: Map | None = None,
     ) -> None:
-        self._design, self._scale, self._lengths = design, scale, lengths
+        self._design, self._lengths = design, lengths
+        self._scale: NDArray[Any] = scale.astype(np.float32, copy=False)
         self._orbitals = rotations.shape[-1]
-        self._fragments = FragmentSum(design.space, rotations, coefficients)
+        self._fragments = FragmentSum(design.space, rotations, coefficients, single=True)
         if precondition is None:
             shapes = (len(scale), scale.shape[-1]), lengths.shape
             diagonal = estimated_diagonal(lambda rng: self._forward(*(rng.standard_normal(shape) for shape in shapes)))
@@ -85,13 +90,14 @@ class IterativeSystem:
         generators = np.zeros((len(turns), self._orbitals, self._orbitals))
         generators[:, p, q] = turns * self._lengths
         generators -= generators.transpose(0, 2, 1)
-        coefficients = np.matmul(self._scale, scaled[:, :, None])[:, :, 0]
+        coefficients = np.matmul(self._scale, scaled.astype(np.float32)[:, :, None])[:, :, 0]
         return self._design.shifts.project(self._fragments.change(generators, coefficients))
 
     def _backward(self, rows: Array) -> tuple[Array, Array]:
         p, q = pair_indices(self._orbitals, strict=True)
         adjoint, gradient = self._fragments.transpose(rows)
-        return np.matmul(adjoint[:, None, :], self._scale)[:, 0, :], gradient[:, p, q] * self._lengths
+        scaled = np.matmul(adjoint.astype(np.float32)[:, None, :], self._scale)[:, 0, :]
+        return scaled.astype(np.float64), gradient[:, p, q] * self._lengths
 
 
 def least_variance(
