@@ -32,6 +32,6 @@ def require_memory(orbitals: int, circuits: int, memory: Any) -> None:
     if needed > allowed:
         raise InputError(
             f"`memory` must be larger for {circuits} circuits of {orbitals} orbitals (got {allowed / 1e9:.3g} GB of "
-            f"some {needed / 1e9:.3g} GB needed); raise it if the machine has that much, take fewer circuits or a smaller "
-            "active space, or keep the coefficients of a fragmentation as they are with reweight=False"
+            f"some {needed / 1e9:.3g} GB needed); raise it if the machine has that much, take fewer circuits or a "
+            "smaller active space, or keep the coefficients of a fragmentation as they are with reweight=False"
         )
