@@ -37,7 +37,7 @@ def h4() -> tuple[Hamiltonian, ReferenceState, Plan]:
 @cache
 def h4_gap() -> OptimalityGap:
     hamiltonian, state, made = h4()
-    return optimality_gap(made, hamiltonian, state, starts=16)
+    return optimality_gap(made, hamiltonian, state, starts=8)
 
 
 def random_hamiltonian(orbitals: int, electrons: tuple[int, int]) -> Hamiltonian:
@@ -207,7 +207,7 @@ def test_cost_and_bound_of_h4_meet_and_more_circuits_approach_them() -> None:
 def test_bound_does_not_depend_on_where_the_search_starts() -> None:
     hamiltonian, state, _ = h4()
     other = plan(hamiltonian, state, fragments=fragment(hamiltonian, LowRank(tol=1e-9)))
-    gap = optimality_gap(other, hamiltonian, state, starts=16, tolerance=0.03, rng=5)
+    gap = optimality_gap(other, hamiltonian, state, starts=6, tolerance=0.03, rng=5)
     assert gap.converged, gap.message
     assert max(gap.lower_bound, h4_gap().lower_bound) <= min(gap.enlarged_cost, h4_gap().enlarged_cost)
 
@@ -216,9 +216,9 @@ def test_without_symmetries_the_bound_is_the_same(monkeypatch: pytest.MonkeyPatc
     hamiltonian = hubbard(3, repulsion=4.0, electrons=(2, 1), periodic=False)
     state = reference_state(hamiltonian, "fci", noise=NOISE)
     made = plan(hamiltonian, state)
-    symmetric = optimality_gap(made, hamiltonian, state, starts=12)
+    symmetric = optimality_gap(made, hamiltonian, state, starts=5)
     monkeypatch.setattr(certificate, "orbital_symmetries", lambda *_: [])
-    plain = optimality_gap(made, hamiltonian, state, starts=12)
+    plain = optimality_gap(made, hamiltonian, state, starts=5)
     for gap in (symmetric, plain):
         assert gap.converged, gap.message
     assert max(symmetric.lower_bound, plain.lower_bound) <= min(symmetric.enlarged_cost, plain.enlarged_cost)
@@ -227,15 +227,15 @@ def test_without_symmetries_the_bound_is_the_same(monkeypatch: pytest.MonkeyPatc
 def test_a_poor_search_never_bounds_above_the_cost() -> None:
     """Weak duality holds for the plan's own rotations and those found, however few are searched for."""
     hamiltonian, state, made = h4()
-    for seed in range(4):
-        gap = optimality_gap(made, hamiltonian, state, rounds=3, starts=1, rng=seed)
+    for seed in range(3):
+        gap = optimality_gap(made, hamiltonian, state, rounds=2, starts=1, rng=seed)
         assert 0 < gap.lower_bound <= gap.enlarged_cost
         assert gap.lower_bound <= gap.cost
 
 
 def test_gap_that_has_not_closed_says_so() -> None:
     hamiltonian, state, made = h4()
-    gap = optimality_gap(made, hamiltonian, state, rounds=1, starts=4)
+    gap = optimality_gap(made, hamiltonian, state, rounds=1, starts=2)
     assert not gap.converged
     assert "have not met" in gap.message
     assert 0 < gap.lower_bound < gap.enlarged_cost <= gap.cost * (1 + 1e-4)
