@@ -8,7 +8,7 @@ and the weights solved again until none is found (column generation).
 
 Mirror images of a rotation under symmetries of Hamiltonian and state have the same φ once ν is symmetric, and averaging
 ν over the images never raises max φ: so all of this is done with symmetric ν only, as if every rotation brought its
-images along. That leaves a half to a sixth of the unknowns.
+images along. That leaves a half to a fifth of the unknowns.
 """
 
 from dataclasses import dataclass, replace
