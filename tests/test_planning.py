@@ -229,7 +229,7 @@ def test_same_seed_same_plan() -> None:
 
 
 def test_interrupt_returns_the_best_exact_plan_so_far(monkeypatch: pytest.MonkeyPatch) -> None:
-    from fragkit.planning._rotations_run import Run
+    from fragkit.planning._rotations.run import Run
 
     original, calls = Run.cycle, []
 

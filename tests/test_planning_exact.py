@@ -9,8 +9,8 @@ from molecules import full_ci, molecule_hamiltonian
 from fragkit.core import Fragment, Hamiltonian, InputError, fragment_tensors
 from fragkit.fit import fragment
 from fragkit.planning import exact_coefficients
-from fragkit.planning._operators import OperatorSpace
-from fragkit.planning._shifts import sector_shifts
+from fragkit.planning._operators.shifts import sector_shifts
+from fragkit.planning._operators.space import OperatorSpace
 from fragkit.states import ReferenceState, reference_state
 
 

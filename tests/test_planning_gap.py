@@ -8,16 +8,16 @@ import numpy as np
 import pytest
 from molecules import full_ci, molecule_hamiltonian
 
-import fragkit.planning._certificate as certificate
+import fragkit.planning._gap.certificate as certificate
 from fragkit import hubbard
 from fragkit.core import Hamiltonian, InputError
 from fragkit.fit import LowRank, fragment
 from fragkit.planning import OperatorSpace, Plan, exact_coefficients, optimality_gap, plan, sector_shifts
-from fragkit.planning._certificate import OptimalityGap
-from fragkit.planning._enlarged_design import EnlargedDesign
-from fragkit.planning._phi_search import PhiSearch
-from fragkit.planning._rotations_start import random_rotations
-from fragkit.planning._symmetries import invariant_rows, orbital_symmetries
+from fragkit.planning._gap.certificate import OptimalityGap
+from fragkit.planning._gap.enlarged_design import EnlargedDesign
+from fragkit.planning._gap.phi_search import PhiSearch
+from fragkit.planning._gap.symmetries import invariant_rows, orbital_symmetries
+from fragkit.planning._rotations.start import random_rotations
 from fragkit.states import ReferenceState, reference_state
 
 NOISE = 1e-2

@@ -13,7 +13,7 @@ from fragkit.core import Fragment, Fragmentation, TimeModel, evaluate_features
 from fragkit.fit import LowRank, fragment
 from fragkit.planning import CHEMICAL_ACCURACY, Plan, plan, reweighted, trade_off
 from fragkit.planning._budget import Budget
-from fragkit.planning._rotations_start import random_rotations
+from fragkit.planning._rotations.start import random_rotations
 from fragkit.states import ReferenceState
 
 # Invented: layers that are slow against preparation, readout and reset.

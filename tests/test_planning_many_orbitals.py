@@ -9,16 +9,17 @@ from molecules import molecule_hamiltonian
 from fragkit import hubbard
 from fragkit.core import Hamiltonian, InputError, fragment_tensors
 from fragkit.fit import fragment
-from fragkit.planning import _lagrangian_factor as factor_module
 from fragkit.planning import exact_coefficients, plan, plan_cost
-from fragkit.planning._design_map import DesignMap
-from fragkit.planning._fragment_sum import FragmentSum
-from fragkit.planning._lagrangian_covariances import Covariances, cayley
-from fragkit.planning._lagrangian_iterative import IterativeSystem, least_variance
-from fragkit.planning._lagrangian_refresh import whitening
-from fragkit.planning._lagrangian_restore import restore
-from fragkit.planning._lagrangian_system import FactorisedSystem
-from fragkit.planning._rotations_start import random_rotations
+from fragkit.planning._operators import factor as factor_module
+from fragkit.planning._operators.conjugate_gradients import least_variance
+from fragkit.planning._operators.design_map import DesignMap
+from fragkit.planning._operators.fragment_sum import FragmentSum
+from fragkit.planning._rotations.covariances import Covariances, cayley
+from fragkit.planning._rotations.iterative import IterativeSystem
+from fragkit.planning._rotations.refresh import whitening
+from fragkit.planning._rotations.restore import restore
+from fragkit.planning._rotations.start import random_rotations
+from fragkit.planning._rotations.system import FactorisedSystem
 from fragkit.states import ReferenceState, reference_state
 
 
@@ -171,7 +172,5 @@ def test_too_little_memory_is_said_before_the_work_begins() -> None:
         lambda: plan(hamiltonian, state, fragments=fragment(hamiltonian), memory=1e7),
         lambda: exact_coefficients(hamiltonian, np.stack([np.eye(13)] * 9), [np.eye(182)] * 9, memory=1e7),
     ):
-        with pytest.raises(
-            InputError, match=r"`memory` must be larger for \d+ circuits of 13 orbitals .*smaller"
-        ):
+        with pytest.raises(InputError, match=r"`memory` must be larger for \d+ circuits of 13 orbitals .*smaller"):
             work()

@@ -8,8 +8,8 @@ from molecules import molecule_hamiltonian
 
 from fragkit.core import Fragment, Fragmentation, evaluate_features, fragment_tensors
 from fragkit.fit import fragment
-from fragkit.planning._operators import OperatorSpace
-from fragkit.planning._shifts import no_shifts, sector_shifts
+from fragkit.planning._operators.shifts import no_shifts, sector_shifts
+from fragkit.planning._operators.space import OperatorSpace
 
 
 def random_rotations(rng: np.random.Generator, count: int, n: int) -> np.ndarray:

@@ -8,16 +8,16 @@ from scipy.linalg import expm
 from fragkit.core import Fragment, Hamiltonian, InputError, MismatchError, fragment_tensors
 from fragkit.fit import LowRank, fragment
 from fragkit.planning import plan
-from fragkit.planning._design_map import DesignMap
-from fragkit.planning._exact import exact_coefficients
-from fragkit.planning._lagrangian import Lagrangian
-from fragkit.planning._lagrangian_covariances import Covariances, cayley, tournament, variance_curvature
-from fragkit.planning._lagrangian_factor import Factor, symmetric_product
-from fragkit.planning._lagrangian_refresh import settle
-from fragkit.planning._lagrangian_restore import restore
-from fragkit.planning._rotations import optimise_rotations
-from fragkit.planning._rotations_memory import Memory
-from fragkit.planning._rotations_start import random_rotations, starting_rotations
+from fragkit.planning._exact.coefficients import exact_coefficients
+from fragkit.planning._operators.design_map import DesignMap
+from fragkit.planning._operators.factor import Factor, symmetric_product
+from fragkit.planning._rotations.covariances import Covariances, cayley, tournament, variance_curvature
+from fragkit.planning._rotations.lagrangian import Lagrangian
+from fragkit.planning._rotations.optimise import optimise_rotations
+from fragkit.planning._rotations.quasi_newton import Memory
+from fragkit.planning._rotations.refresh import settle
+from fragkit.planning._rotations.restore import restore
+from fragkit.planning._rotations.start import random_rotations, starting_rotations
 from fragkit.states import ReferenceState, reference_state
 
 

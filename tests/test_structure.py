@@ -22,6 +22,13 @@ MAY_IMPORT = {
     "report": {"core", "readers", "fit", "states", "circuits", "pauli", "planning", "estimate"},
     "files": {"core", "readers", "fit", "states", "circuits", "pauli", "planning", "estimate"},
 }
+# Inside of planning; what is not in a folder may import all of them.
+PLANNING_MAY_IMPORT = {
+    "_operators": set(),
+    "_exact": {"_operators"},
+    "_rotations": {"_operators"},
+    "_gap": {"_operators", "_exact", "_rotations"},
+}
 # Methods of Plan, TradeOff, Counts and Estimate forward to upper rooms, and import them in the method's body.
 FORWARDING = {
     "planning/_plan.py",
@@ -44,7 +51,7 @@ def imported_rooms(tree: ast.AST) -> set[str]:
 
 @pytest.mark.parametrize("room", sorted(MAY_IMPORT))
 def test_lower_rooms_never_import_upper_ones(room: str) -> None:
-    files = sorted((PACKAGE / room).glob("*.py"))
+    files = sorted((PACKAGE / room).rglob("*.py"))
     assert files, f"room {room} has no files"
     for path in files:
         tree = ast.parse(path.read_text())
@@ -52,6 +59,16 @@ def test_lower_rooms_never_import_upper_ones(room: str) -> None:
             tree = ast.Module([node for node in tree.body if isinstance(node, ast.Import | ast.ImportFrom)], [])
         wrong = imported_rooms(tree) - MAY_IMPORT[room] - {room}
         assert not wrong, f"{room}/{path.name} imports {sorted(wrong)}"
+
+
+@pytest.mark.parametrize("folder", sorted(PLANNING_MAY_IMPORT))
+def test_folders_of_planning_import_downwards(folder: str) -> None:
+    files = sorted((PACKAGE / "planning" / folder).glob("*.py"))
+    assert len(files) > 3
+    for path in files:
+        parts = [name.split(".") for name in imported_paths(ast.parse(path.read_text()))]
+        used = {part[2] for part in parts if part[:2] == ["fragkit", "planning"]} & set(PLANNING_MAY_IMPORT)
+        assert used <= PLANNING_MAY_IMPORT[folder] | {folder}, f"{path.name} imports {sorted(used)}"
 
 
 def imported_paths(tree: ast.AST) -> list[str]:

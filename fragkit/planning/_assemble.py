@@ -11,7 +11,7 @@ from fragkit.core import Fragment, Hamiltonian, cheapest_form
 from fragkit.planning._budget import Budget
 from fragkit.planning._choose import Design
 from fragkit.planning._cost import fragment_deviations
-from fragkit.planning._exact import Weighting
+from fragkit.planning._exact.coefficients import Weighting
 from fragkit.planning._plan import Plan, PlanBound
 from fragkit.planning._robust import noise_of, robust_state, share_state
 from fragkit.states import DeterminantState, ReferenceState

@@ -11,11 +11,11 @@ from fragkit.core import Fragmentation, Hamiltonian, InputError, feature_count
 from fragkit.fit import Joint, fragment
 from fragkit.planning._budget import Budget
 from fragkit.planning._counts import least_count
-from fragkit.planning._exact import EXACT, Weighting, exact_coefficients, given_coefficients
-from fragkit.planning._lagrangian_factor import is_factorised
+from fragkit.planning._exact.coefficients import EXACT, Weighting, exact_coefficients, given_coefficients
 from fragkit.planning._memory import MEMORY
-from fragkit.planning._operators import OperatorSpace
-from fragkit.planning._rotations import RIDGE, RotationDesign, optimise_rotations
+from fragkit.planning._operators.factor import is_factorised
+from fragkit.planning._operators.space import OperatorSpace
+from fragkit.planning._rotations.optimise import RIDGE, RotationDesign, optimise_rotations
 from fragkit.states import ReferenceState
 
 Array = NDArray[np.float64]

@@ -11,8 +11,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import Hamiltonian, InputError, as_positive, as_real_array, evaluate_features, pair_indices
-from fragkit.planning._design_map import DesignMap
-from fragkit.planning._operators import OperatorSpace
+from fragkit.planning._operators.design_map import DesignMap
+from fragkit.planning._operators.space import OperatorSpace
 from fragkit.states import MaximallyMixedState
 
 Array = NDArray[np.float64]

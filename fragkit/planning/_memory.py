@@ -3,8 +3,8 @@
 from typing import Any
 
 from fragkit.core import InputError, as_positive, feature_count
-from fragkit.planning._lagrangian_factor import is_factorised
-from fragkit.planning._operators import OperatorSpace
+from fragkit.planning._operators.factor import is_factorised
+from fragkit.planning._operators.space import OperatorSpace
 
 MEMORY = 8e9
 """Bytes that planning may use unless more is allowed."""

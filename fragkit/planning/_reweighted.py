@@ -11,7 +11,7 @@ from fragkit.core import Hamiltonian, TimeModel, as_real_array, feature_count
 from fragkit.planning._assemble import assemble, weighting_fragments, weighting_promises, with_shots
 from fragkit.planning._budget import Budget
 from fragkit.planning._cost import check_state
-from fragkit.planning._exact import exact_coefficients
+from fragkit.planning._exact.coefficients import exact_coefficients
 from fragkit.planning._plan import Plan, as_plan
 from fragkit.planning._robust import robust_state, share_state
 from fragkit.planning._threads import sized_blas_threads

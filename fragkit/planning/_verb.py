@@ -22,11 +22,11 @@ from fragkit.planning._choose import (
 )
 from fragkit.planning._cost import check_state
 from fragkit.planning._counts import least_count
-from fragkit.planning._exact import EXACT
+from fragkit.planning._exact.coefficients import EXACT
 from fragkit.planning._memory import MEMORY
 from fragkit.planning._plan import Plan
 from fragkit.planning._robust import robust_state, share_state
-from fragkit.planning._rotations import as_ridge
+from fragkit.planning._rotations.optimise import as_ridge
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.planning._trade_off import plan_seconds
 from fragkit.states import ReferenceState

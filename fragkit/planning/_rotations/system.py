@@ -11,9 +11,9 @@ from typing import Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.planning._design_map import DesignMap
-from fragkit.planning._lagrangian_factor import Factor, is_factorised, symmetric_product, working_precision
-from fragkit.planning._lagrangian_iterative import IterativeSystem
+from fragkit.planning._operators.design_map import DesignMap
+from fragkit.planning._operators.factor import Factor, is_factorised, symmetric_product, working_precision
+from fragkit.planning._rotations.iterative import IterativeSystem
 
 Array = NDArray[np.float64]
 Metric = Callable[[Array], Array]

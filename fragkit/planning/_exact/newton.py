@@ -17,7 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import solve
 
-from fragkit.planning._whitened import Information, WhitenedDesign
+from fragkit.planning._exact.whitened import Information, WhitenedDesign
 
 Array = NDArray[np.float64]
 

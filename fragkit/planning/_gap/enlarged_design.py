@@ -6,10 +6,10 @@ from itertools import pairwise
 import numpy as np
 from numpy.typing import NDArray
 
-from fragkit.planning._least_variance import newton_weights
-from fragkit.planning._phi_search import PhiSearch
-from fragkit.planning._shifts import Shifts
-from fragkit.planning._whitened import WhitenedDesign
+from fragkit.planning._exact.newton import newton_weights
+from fragkit.planning._exact.whitened import WhitenedDesign
+from fragkit.planning._gap.phi_search import PhiSearch
+from fragkit.planning._operators.shifts import Shifts
 
 Array = NDArray[np.float64]
 

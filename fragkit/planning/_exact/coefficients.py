@@ -7,15 +7,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import Hamiltonian, InputError, as_real_array, energy_bound, feature_count, residual_norm
-from fragkit.planning._cone import cone_weights
-from fragkit.planning._design_map import DesignMap
-from fragkit.planning._exact_iterative import constants_for, multiplicative_weights
-from fragkit.planning._lagrangian_factor import is_factorised
-from fragkit.planning._least_variance import Weights, newton_weights
+from fragkit.planning._exact.cone import cone_weights
+from fragkit.planning._exact.multiplicative import constants_for, multiplicative_weights
+from fragkit.planning._exact.newton import Weights, newton_weights
+from fragkit.planning._exact.whitened import WhitenedDesign
 from fragkit.planning._memory import MEMORY, require_memory
-from fragkit.planning._operators import OperatorSpace
-from fragkit.planning._shifts import Shifts, no_shifts, sector_shifts
-from fragkit.planning._whitened import WhitenedDesign
+from fragkit.planning._operators.design_map import DesignMap
+from fragkit.planning._operators.factor import is_factorised
+from fragkit.planning._operators.shifts import Shifts, no_shifts, sector_shifts
+from fragkit.planning._operators.space import OperatorSpace
 
 Array = NDArray[np.float64]
 

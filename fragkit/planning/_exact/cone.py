@@ -7,8 +7,8 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import sparse
 
-from fragkit.planning._least_variance import Weights
-from fragkit.planning._whitened import WhitenedDesign
+from fragkit.planning._exact.newton import Weights
+from fragkit.planning._exact.whitened import WhitenedDesign
 
 Array = NDArray[np.float64]
 

@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import pair_indices
-from fragkit.planning._design_map import DesignMap
+from fragkit.planning._operators.design_map import DesignMap
 from fragkit.states import ReferenceState
 
 Array = NDArray[np.float64]

@@ -13,9 +13,9 @@ from numpy.typing import NDArray
 from scipy.linalg import lstsq, solve_triangular
 
 from fragkit.core import InputError
-from fragkit.planning._design_map import DesignMap
-from fragkit.planning._lagrangian_iterative import least_variance
-from fragkit.planning._shifts import Shifts
+from fragkit.planning._operators.conjugate_gradients import least_variance
+from fragkit.planning._operators.design_map import DesignMap
+from fragkit.planning._operators.shifts import Shifts
 
 Array = NDArray[np.float64]
 

@@ -14,9 +14,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import pair_indices
-from fragkit.planning._design_map import DesignMap
-from fragkit.planning._lagrangian_covariances import Covariances, cayley
-from fragkit.planning._lagrangian_refresh import Refresh
+from fragkit.planning._operators.design_map import DesignMap
+from fragkit.planning._rotations.covariances import Covariances, cayley
+from fragkit.planning._rotations.refresh import Refresh
 
 Array = NDArray[np.float64]
 

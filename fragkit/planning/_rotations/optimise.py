@@ -9,12 +9,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import Hamiltonian, InputError, as_count, as_positive
-from fragkit.planning._design_map import DesignMap
-from fragkit.planning._lagrangian_covariances import Covariances
 from fragkit.planning._memory import MEMORY, require_memory
-from fragkit.planning._rotations_file import RotationsFile
-from fragkit.planning._rotations_run import FEASIBLE, Run
-from fragkit.planning._rotations_start import starting_rotations
+from fragkit.planning._operators.design_map import DesignMap
+from fragkit.planning._rotations.covariances import Covariances
+from fragkit.planning._rotations.file import RotationsFile
+from fragkit.planning._rotations.run import FEASIBLE, Run
+from fragkit.planning._rotations.start import starting_rotations
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.states import ReferenceState
 

@@ -7,9 +7,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import Hamiltonian, pair_indices, unpack_features
-from fragkit.planning._fragment_sum import FragmentSum
-from fragkit.planning._operators import OperatorSpace
-from fragkit.planning._shifts import Shifts, sector_shifts
+from fragkit.planning._operators.fragment_sum import FragmentSum
+from fragkit.planning._operators.shifts import Shifts, sector_shifts
+from fragkit.planning._operators.space import OperatorSpace
 from fragkit.states import MaximallyMixedState
 
 Array = NDArray[np.float64]

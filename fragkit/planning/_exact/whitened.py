@@ -9,8 +9,8 @@ from numpy.typing import NDArray
 from scipy.linalg import cho_solve, cholesky, lstsq, solve_triangular
 from scipy.linalg.blas import dsyrk  # pyright: ignore[reportAttributeAccessIssue]
 
-from fragkit.planning._operators import OperatorSpace
-from fragkit.planning._shifts import Shifts
+from fragkit.planning._operators.shifts import Shifts
+from fragkit.planning._operators.space import OperatorSpace
 
 Array = NDArray[np.float64]
 

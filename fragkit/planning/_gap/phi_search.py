@@ -4,8 +4,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import Hamiltonian
-from fragkit.planning._design_map import DesignMap
-from fragkit.planning._fragment_sum import FragmentSum
+from fragkit.planning._operators.design_map import DesignMap
+from fragkit.planning._operators.fragment_sum import FragmentSum
 from fragkit.states import ReferenceState
 
 Array = NDArray[np.float64]

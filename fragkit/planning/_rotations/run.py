@@ -10,13 +10,13 @@ from threadpoolctl import ThreadpoolController
 
 from fragkit.core import InputError
 from fragkit.planning._counts import least_count
-from fragkit.planning._design_map import DesignMap
-from fragkit.planning._lagrangian import Lagrangian, Point
-from fragkit.planning._lagrangian_covariances import Covariances
-from fragkit.planning._lagrangian_factor import is_factorised
-from fragkit.planning._lagrangian_refresh import Refresh, settle
-from fragkit.planning._lagrangian_restore import EXACT, first_coefficients, restore
-from fragkit.planning._rotations_memory import Memory
+from fragkit.planning._operators.design_map import DesignMap
+from fragkit.planning._operators.factor import is_factorised
+from fragkit.planning._rotations.covariances import Covariances
+from fragkit.planning._rotations.lagrangian import Lagrangian, Point
+from fragkit.planning._rotations.quasi_newton import Memory
+from fragkit.planning._rotations.refresh import Refresh, settle
+from fragkit.planning._rotations.restore import EXACT, first_coefficients, restore
 
 Array = NDArray[np.float64]
 

@@ -20,12 +20,12 @@ from numpy.typing import NDArray
 from fragkit.core import Hamiltonian, InputError, as_count, as_positive
 from fragkit.planning._choose import distinct
 from fragkit.planning._cost import check_state, fragment_deviations
-from fragkit.planning._enlarged_design import Dual, EnlargedDesign
-from fragkit.planning._phi_search import PhiSearch
+from fragkit.planning._gap.enlarged_design import Dual, EnlargedDesign
+from fragkit.planning._gap.phi_search import PhiSearch
+from fragkit.planning._gap.symmetries import invariant_rows, orbital_symmetries
 from fragkit.planning._plan import Plan, PlanBound, as_plan
 from fragkit.planning._robust import robust_state
-from fragkit.planning._rotations_start import random_rotations
-from fragkit.planning._symmetries import invariant_rows, orbital_symmetries
+from fragkit.planning._rotations.start import random_rotations
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.states import ReferenceState
 

@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import pair_indices
-from fragkit.planning._operators import OperatorSpace
+from fragkit.planning._operators.space import OperatorSpace
 
 Array = NDArray[np.float64]
 

@@ -9,9 +9,9 @@ from numpy.typing import NDArray
 from scipy.linalg import solve_triangular
 
 from fragkit.core import InputError
-from fragkit.planning._design_map import DesignMap
-from fragkit.planning._lagrangian_covariances import Covariances
-from fragkit.planning._lagrangian_factor import Factor, working_precision
+from fragkit.planning._operators.design_map import DesignMap
+from fragkit.planning._operators.factor import Factor, working_precision
+from fragkit.planning._rotations.covariances import Covariances
 
 Array = NDArray[np.float64]
 

@@ -10,12 +10,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.core import InputError, pair_indices
-from fragkit.planning._design_map import DesignMap
-from fragkit.planning._lagrangian_covariances import Covariances, cayley, variance_curvature
-from fragkit.planning._lagrangian_factor import is_factorised
-from fragkit.planning._lagrangian_iterative import least_variance
-from fragkit.planning._lagrangian_refresh import Refresh, whitening
-from fragkit.planning._lagrangian_system import system_at
+from fragkit.planning._operators.conjugate_gradients import least_variance
+from fragkit.planning._operators.design_map import DesignMap
+from fragkit.planning._operators.factor import is_factorised
+from fragkit.planning._rotations.covariances import Covariances, cayley, variance_curvature
+from fragkit.planning._rotations.refresh import Refresh, whitening
+from fragkit.planning._rotations.system import system_at
 
 Array = NDArray[np.float64]
 

@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 from scipy import sparse
 
 from fragkit.core import pair_indices
-from fragkit.planning._operators import OperatorSpace
+from fragkit.planning._operators.space import OperatorSpace
 
 Array = NDArray[np.float64]
 

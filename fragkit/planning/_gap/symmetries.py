@@ -9,9 +9,9 @@ from numpy.typing import NDArray
 from scipy.linalg import expm
 
 from fragkit.core import Hamiltonian, pair_indices
-from fragkit.planning._operators import OperatorSpace
-from fragkit.planning._rotations_start import random_rotations
-from fragkit.planning._shifts import Shifts
+from fragkit.planning._operators.shifts import Shifts
+from fragkit.planning._operators.space import OperatorSpace
+from fragkit.planning._rotations.start import random_rotations
 from fragkit.states import ReferenceState
 
 Array = NDArray[np.float64]

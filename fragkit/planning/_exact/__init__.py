@@ -1,0 +1,1 @@
+"""Exact coefficients of least variance at fixed rotations."""

@@ -1,0 +1,1 @@
+"""The distance of a plan from the best one with any rotations."""

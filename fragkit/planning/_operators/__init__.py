@@ -1,0 +1,1 @@
+"""Operators as vectors of rows: fragments to rows and back, and what vanishes at fixed electron numbers."""
