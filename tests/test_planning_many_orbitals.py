@@ -9,7 +9,7 @@ from molecules import molecule_hamiltonian
 from fragkit import hubbard
 from fragkit.core import Hamiltonian, InputError, fragment_tensors
 from fragkit.fit import fragment
-from fragkit.planning import exact_coefficients, plan, plan_cost
+from fragkit.planning import exact_coefficients, optimality_gap, plan, plan_cost
 from fragkit.planning._operators import factor as factor_module
 from fragkit.planning._operators.conjugate_gradients import least_variance
 from fragkit.planning._operators.design_map import DesignMap
@@ -162,6 +162,8 @@ def test_thirteen_sites_from_a_determinant() -> None:
     assert not made.converged
     assert "still falling" in made.message
     assert state.variance(hamiltonian) < plan_cost(made, state)
+    with pytest.raises(InputError, match=r"`plan` must be of at most 12 orbitals \(got 13\).*quantum limit"):
+        optimality_gap(made, hamiltonian, state)
 
 
 def test_too_little_memory_is_said_before_the_work_begins() -> None:

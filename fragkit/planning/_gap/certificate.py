@@ -23,6 +23,8 @@ from fragkit.planning._cost import check_state, fragment_deviations
 from fragkit.planning._gap.enlarged_design import Dual, EnlargedDesign
 from fragkit.planning._gap.phi_search import PhiSearch
 from fragkit.planning._gap.symmetries import invariant_rows, orbital_symmetries
+from fragkit.planning._operators.factor import is_factorised
+from fragkit.planning._operators.space import OperatorSpace
 from fragkit.planning._plan import Plan, PlanBound, as_plan
 from fragkit.planning._robust import robust_state
 from fragkit.planning._rotations.start import random_rotations
@@ -126,7 +128,7 @@ def optimality_gap(
     Raises
     ------
     InputError
-        If an argument is not what it must be.
+        If an argument is not what it must be, or the plan has more than 12 orbitals.
     MismatchError
         If plan, Hamiltonian and state do not belong together.
 
@@ -152,6 +154,11 @@ def optimality_gap(
     """
     as_plan(plan).check_belongs_to(hamiltonian)
     check_state(state, plan.orbitals, plan.electrons)
+    if not is_factorised(OperatorSpace(plan.orbitals).size):
+        raise InputError(
+            f"`plan` must be of at most 12 orbitals (got {plan.orbitals}): the search for the bound forms matrices of "
+            "n^4/5 rows; compare the plan with its quantum limit, `plan.bound`, instead"
+        )
     rounds, starts = as_count(rounds, "rounds", minimum=1), as_count(starts, "starts", minimum=1)
     tolerance = as_positive(tolerance, "tolerance")
     generator = np.random.default_rng(rng)
