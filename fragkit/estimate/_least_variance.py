@@ -48,25 +48,25 @@ class FixedShots:
         self._design = WhitenedDesign(self.space, rotations, list(covariances), np.zeros(self.space.size), self.shifts)
         self._rotations = rotations
         self._shares = shots / np.sum(shots)
-        self._information = self._design.information(self._shares)
+        self._information = self._design.unit.information(self._shares)
 
     def with_shots(self, shots: NDArray[Any]) -> "FixedShots":
         """The same circuits and covariances with other shots."""
         other = copy(self)
         other._shares = shots / np.sum(shots)
-        other._information = self._design.information(other._shares)
+        other._information = self._design.unit.information(other._shares)
         return other
 
     def slopes(self, rows: Array) -> Array:
         """(K,) φ_m = νᵀ A_m C_m⁻¹ A_mᵀ ν of an operator: minus the derivative of its variance by the shares."""
         design = self._design
-        response = design.matrix.T @ self._information.inverse(design.from_rows(rows))
-        return np.array([response[block] @ response[block] for block in design.blocks])
+        response = design.unit.matrix.T @ self._information.inverse(design.from_rows(rows))
+        return np.array([response[block] @ response[block] for block in design.unit.blocks])
 
     def combination(self, rows: Array) -> Combination:
         """Coefficients for the operator with these rows of `OperatorSpace`."""
         design, size = self._design, float(np.linalg.norm(rows))
-        coefficients = np.zeros((design.count, design.whiteners[0].shape[0]))
+        coefficients = np.zeros((design.unit.count, design.whiteners[0].shape[0]))
         left, previous = self.shifts.project(rows), np.inf
         # Repeated because M is ill-conditioned: each pass removes most of what rounding left.
         for _ in range(6):
@@ -75,7 +75,7 @@ class FixedShots:
                 break
             previous = now
             dual = self._information.inverse(design.from_rows(left))
-            coefficients = coefficients + design.features(design.coefficients(self._shares, dual))
+            coefficients = coefficients + design.coefficients(self._shares, dual)
             coefficients = coefficients + design.free_part(self.shifts.project(self._left(rows, coefficients)))
             left = self.shifts.project(self._left(rows, coefficients))
         missing, constant = self.shifts.split(self._left(rows, coefficients))

@@ -169,16 +169,16 @@ def exact_coefficients(
     free = sector_shifts(space, hamiltonian.electrons) if shifts else no_shifts(space)
     design = WhitenedDesign(space, rotations, checked, space.hamiltonian_rows(hamiltonian), free)
     if method == "cone":
-        found = cone_weights(design, tolerance=0.1 * tolerance)
+        found = cone_weights(design.unit, tolerance=0.1 * tolerance)
     else:
-        found = newton_weights(design, start=start, tolerance=tolerance, iterations=iterations, report=report)
+        found = newton_weights(design.unit, start=start, tolerance=tolerance, iterations=iterations, report=report)
     return _weighting(
         hamiltonian,
         rotations,
         _refined(design, found),
         checked,
         free,
-        dual=design.to_rows(found.dual),
+        dual=design.unit.to_rows(found.dual),
         lower_bound=found.lower_bound,
         tolerance=tolerance,
         iterations=found.iterations,
@@ -253,9 +253,9 @@ def _weighting(
 
 def _refined(design: WhitenedDesign, found: Weights) -> Array:
     """Coefficients (K, F) of the weights, corrected until what is left is rounding noise."""
-    coefficients = design.features(design.coefficients(found.weights, found.dual))
+    coefficients = design.coefficients(found.weights, found.dual)
     information = found.information
-    wanted = float(np.linalg.norm(design.wanted))
+    wanted = float(np.linalg.norm(design.unit.wanted))
     size = np.inf
     for _ in range(6):
         left = design.from_rows(design.residual(coefficients))
@@ -265,8 +265,7 @@ def _refined(design: WhitenedDesign, found: Weights) -> Array:
         size = now
         if information is None:
             break
-        step = design.coefficients(information.weights, information.inverse(left))
-        coefficients = coefficients + design.features(step)
+        coefficients = coefficients + design.coefficients(information.weights, information.inverse(left))
     return coefficients + design.free_part(design.residual(coefficients))
 
 

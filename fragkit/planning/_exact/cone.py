@@ -8,12 +8,12 @@ from numpy.typing import NDArray
 from scipy import sparse
 
 from fragkit.planning._exact.newton import Weights
-from fragkit.planning._exact.whitened import WhitenedDesign
+from fragkit.planning._exact.unit_design import UnitDesign
 
 Array = NDArray[np.float64]
 
 
-def cone_weights(design: WhitenedDesign, *, tolerance: float = 1e-8, iterations: int = 200) -> Weights:
+def cone_weights(design: UnitDesign, *, tolerance: float = 1e-8, iterations: int = 200) -> Weights:
     """min Σ_m t_m with |x_m| ≤ t_m and Σ_m B_m x_m = h, whitened coefficients x_m.
 
     Independent of the Newton iteration on the weights, and much slower: every entry of B is a constraint coefficient

@@ -17,7 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import solve
 
-from fragkit.planning._exact.whitened import Information, WhitenedDesign
+from fragkit.planning._exact.unit_design import Information, UnitDesign
 
 Array = NDArray[np.float64]
 
@@ -44,7 +44,7 @@ class Weights:
 
 
 def newton_weights(
-    design: WhitenedDesign,
+    design: UnitDesign,
     *,
     start: Array | None = None,
     tolerance: float = 1e-6,
@@ -105,7 +105,7 @@ def newton_weights(
 
 
 def _step(
-    design: WhitenedDesign,
+    design: UnitDesign,
     blocks: list[slice],
     information: Information,
     scale: float,

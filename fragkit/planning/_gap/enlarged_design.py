@@ -1,15 +1,13 @@
 """A design that rotations are added to, all of them with their images under the symmetries, and its duals so far."""
 
 from dataclasses import dataclass
-from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
 
 from fragkit.planning._exact.newton import newton_weights
-from fragkit.planning._exact.whitened import WhitenedDesign
+from fragkit.planning._exact.unit_design import UnitDesign
 from fragkit.planning._gap.phi_search import PhiSearch
-from fragkit.planning._operators.shifts import Shifts
 
 Array = NDArray[np.float64]
 
@@ -76,7 +74,8 @@ class EnlargedDesign:
 
     def solve(self) -> Dual | None:
         """Weights and cost for the present rotations; their dual, or None if nothing has to be measured."""
-        design = _GivenDesign(self._blocks, self._wanted)
+        sizes = [block.shape[1] for block in self._blocks]
+        design = UnitDesign(np.concatenate(self._blocks, axis=1), sizes, self._wanted)
         found = newton_weights(design, start=self._shares, tolerance=WEIGHT_TOLERANCE)
         self.cost = found.cost
         if found.cost == 0.0:
@@ -117,19 +116,3 @@ class EnlargedDesign:
 
     def _reduced(self, rotations: Array) -> list[Array]:
         return [self._basis.T @ self._search.block(rotation) for rotation in rotations]
-
-
-class _GivenDesign(WhitenedDesign):
-    """Operators of unit variance in any space, given as blocks (d, F) of each circuit, without shifts."""
-
-    def __init__(self, blocks: list[Array], wanted: Array) -> None:
-        size = len(wanted)
-        ends = np.cumsum([0, *(block.shape[1] for block in blocks)])
-        self.blocks = [slice(int(a), int(b)) for a, b in pairwise(ends)]
-        self.matrix = np.asfortranarray(np.concatenate(blocks, axis=1))
-        self.wanted = self.target = wanted
-        self.shifts = Shifts(np.zeros((size, 0)), np.zeros(0))
-        self.free_basis = np.zeros((size, 0))
-        self.unreachable = 0.0
-        self._basis = None
-        self._lengths = np.linalg.norm(self.matrix, axis=0)
