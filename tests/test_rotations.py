@@ -404,6 +404,33 @@ def test_interrupt_checkpoint_and_resume(tmp_path) -> None:
         optimise_rotations(hamiltonian, state, 9, checkpoint=path, resume=True)
 
 
+def test_surplus_circuits_are_left_out_again(tmp_path) -> None:
+    """Also when the search is interrupted, or out of evaluations, while there are too many; and it resumes there."""
+    hamiltonian = molecule_hamiltonian("LiH")
+    state = reference_state(hamiltonian, "cisd", noise=1e-2)
+    direct = optimise_rotations(hamiltonian, state, 16, tolerance=2e-2)
+    better = optimise_rotations(hamiltonian, state, 16, tolerance=2e-2, surplus=0.5)
+    assert len(better.rotations) == len(better.coefficients) == len(better.shares) == 16
+    assert better.infeasibility < 1e-9
+    assert better.cost < 1.02 * direct.cost
+    short = optimise_rotations(hamiltonian, state, 16, surplus=0.5, max_evaluations=100)
+    assert len(short.rotations) == 16
+    assert short.infeasibility < 1e-9
+    assert not short.converged
+    path = tmp_path / "rotations.npz"
+    stopped = optimise_rotations(
+        hamiltonian, Interrupting(state, 300), 16, surplus=0.5, on_interrupt="return", checkpoint=path
+    )
+    assert stopped.message.startswith("Interrupted")
+    assert len(stopped.rotations) == 16
+    assert stopped.infeasibility < 1e-9
+    resumed = optimise_rotations(hamiltonian, state, 16, surplus=0.5, tolerance=2e-2, checkpoint=path, resume=True)
+    assert resumed.converged
+    assert resumed.cost < 1.02 * direct.cost
+    with pytest.raises(MismatchError, match="`count` = 17 or 14 or 12 rotations"):
+        optimise_rotations(hamiltonian, state, 12, surplus=0.4, checkpoint=path, resume=True)
+
+
 @pytest.mark.parametrize(
     ("options", "message"),
     [
@@ -411,6 +438,7 @@ def test_interrupt_checkpoint_and_resume(tmp_path) -> None:
         ({"starts": 0}, "`starts` must be at least 1"),
         ({"tolerance": 0.0}, "`tolerance` must be"),
         ({"ridge": -1.0}, "`ridge` must be"),
+        ({"surplus": -0.5}, "`surplus` must be"),
         ({"ridge": "much"}, "`ridge` must be"),
         ({"max_evaluations": 0}, "`max_evaluations` must be"),
         ({"on_interrupt": "ignore"}, "`on_interrupt` must be"),

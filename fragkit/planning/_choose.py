@@ -37,6 +37,7 @@ class Settings:
     budget: Budget
     shifts: bool = True
     starts: int = 1
+    surplus: float = 0.0
     rng: np.random.Generator | int | None = 0
     tolerance: float = 5e-3
     max_evaluations: int = 4000
@@ -197,6 +198,7 @@ def _optimised(
         count,
         start=start,
         starts=settings.starts,
+        surplus=settings.surplus,
         rng=settings.rng,
         tolerance=settings.tolerance,
         max_evaluations=settings.max_evaluations,

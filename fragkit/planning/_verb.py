@@ -26,7 +26,7 @@ from fragkit.planning._exact.coefficients import EXACT
 from fragkit.planning._memory import MEMORY
 from fragkit.planning._plan import Plan
 from fragkit.planning._robust import robust_state, share_state
-from fragkit.planning._rotations.optimise import as_ridge
+from fragkit.planning._rotations.optimise import as_ridge, as_surplus
 from fragkit.planning._threads import sized_blas_threads
 from fragkit.planning._trade_off import plan_seconds
 from fragkit.states import ReferenceState
@@ -51,6 +51,7 @@ def plan(
     planning_noise: float | None = None,
     ridge: float = 0.0,
     starts: int = 1,
+    surplus: float = 0.0,
     rng: np.random.Generator | int | None = 0,
     tolerance: float = 5e-3,
     max_evaluations: int = 4000,
@@ -109,6 +110,9 @@ def plan(
     starts, rng, tolerance, max_evaluations
         Independent starts of the optimisation, their seed, the relative fall of the cost at which it ends, and its
         most evaluations. The same seed gives the same plan on the same machine.
+    surplus
+        Begin the optimisation with this fraction of circuits more, and leave the lightest out step by step. With 1.0
+        that takes three times the time, and the cost is up to 2 % lower.
     progress
         Show a bar with the current cost.
     checkpoint, resume
@@ -163,6 +167,7 @@ def plan(
         budget,
         shifts=bool(shifts),
         starts=as_count(starts, "starts", minimum=1),
+        surplus=as_surplus(surplus),
         rng=rng,
         tolerance=as_positive(tolerance, "tolerance"),
         max_evaluations=as_count(max_evaluations, "max_evaluations", minimum=1),

@@ -27,17 +27,18 @@ class RotationsFile:
         """Replace the file."""
         self._archive.write({"rotations": rotations, "shares": shares, "evaluations": evaluations})
 
-    def read(self, count: int, orbitals: int) -> tuple[Array, Array, int]:
-        """Rotations (count, n, n), shares (count,) and evaluations spent.
+    def read(self, counts: list[int], orbitals: int) -> tuple[Array, Array, int]:
+        """Rotations (K, n, n), shares (K,) and evaluations spent; K is one of `counts`.
 
         Raises `InputError` if the file is missing or damaged, `MismatchError` if it belongs to another problem.
         """
         rotations, shares, evaluations = self._archive.read(("rotations", "shares", "evaluations"))
         rotations = as_real_array(rotations, "checkpoint rotations", (None, orbitals, orbitals))
-        if len(rotations) != count:
+        if len(rotations) not in counts:
             raise MismatchError(
-                f"`checkpoint` must hold `count` = {count} rotations (got {len(rotations)}); resume with the same count"
+                f"`checkpoint` must hold `count` = {' or '.join(map(str, counts))} rotations (got {len(rotations)}); "
+                "resume with the same count and surplus"
             )
         for rotation in rotations:
             as_rotation(rotation, orbitals, "checkpoint rotations")
-        return rotations, as_real_array(shares, "checkpoint shares", (count,)), int(evaluations)
+        return rotations, as_real_array(shares, "checkpoint shares", (len(rotations),)), int(evaluations)

