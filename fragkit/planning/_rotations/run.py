@@ -34,19 +34,24 @@ class Run:
     """The state of one descent; `best` is the refresh of lowest cost so far, exact or, of many orbitals, nearly so."""
 
     def __init__(
-        self, design: DesignMap, covariances: Covariances, rotations: Array, shares: Array | None = None
+        self,
+        design: DesignMap,
+        covariances: Covariances,
+        rotations: Array,
+        shares: Array | None = None,
+        coefficients: Array | None = None,
     ) -> None:
         self._design = design
         self._covariances = covariances
         count, n = len(rotations), design.orbitals
-        weights = np.full(count, 1.0 / count) if shares is None else shares
         # From `least_count` on exact coefficients exist at almost every rotation, and they make the better start.
         self._factorised = is_factorised(design.space.size)
         self._exact, self._feasible = (EXACT, FEASIBLE) if self._factorised else (ROUGH, 3.0 * ROUGH)
         self._generic = self._factorised and count >= least_count(n)
-        if self._generic:
+        if coefficients is None and self._generic:
+            weights = np.full(count, 1.0 / count) if shares is None else shares
             coefficients = settle(design, covariances, rotations, weights, iterations=2).coefficients
-        else:
+        elif coefficients is None:
             coefficients = first_coefficients(design, rotations)
         self.current = self.best = restore(design, covariances, rotations, coefficients, exact=self._exact)
         self._memory = Memory(MEMORY, count * (n * (n - 1) // 2 + design.features.shape[1]))
@@ -110,8 +115,8 @@ class Run:
     def thinned(self, count: int) -> "Run":
         """A descent from the best refresh without its lightest circuits."""
         heaviest = np.sort(np.argsort(-self.best.shares)[:count])
-        shares = self.best.shares[heaviest]
-        return Run(self._design, self._covariances, self.best.rotations[heaviest], shares / shares.sum())
+        rotations, coefficients = self.best.rotations[heaviest], self.best.coefficients[heaviest]
+        return Run(self._design, self._covariances, rotations, coefficients=coefficients)
 
     def finish(self) -> Refresh:
         """The best refresh, exact, with coefficients of least variance for its rotations where that is cheap."""
@@ -119,7 +124,10 @@ class Run:
             best = self.best
             self.best = restore(self._design, self._covariances, best.rotations, best.coefficients, dual=best.dual)
         if self._generic:
-            found = settle(self._design, self._covariances, self.best.rotations, self.best.shares, iterations=2)
+            try:
+                found = settle(self._design, self._covariances, self.best.rotations, self.best.shares, iterations=2)
+            except InputError:
+                return self.best  # exact, but with hardly any freedom at these rotations
             if found.cost < self.best.cost and found.infeasibility <= FEASIBLE:
                 self.best = replace(
                     self.best,
