@@ -66,17 +66,17 @@ class Run:
         if not self._factorised:
             return min(400, 60 * len(self.history))
         longest = 80 if self._design.space.size < SMALL else 160
-        if len(self.history) > 1 and self.history[-1][1] > 0.98 * self.history[-2][1]:
+        if len(self.history) > 1 and 0.98 * self.history[-2][1] < self.history[-1][1] < self.history[-2][1]:
             longest *= 2
         return min(longest, 20 + 15 * (len(self.history) - 1))
 
     def recent_fall(self, window: int) -> float | None:
         """Relative fall of the best cost over the last `window` evaluations, or None while there were fewer.
 
-        Where refreshes are rare, over at least the last two of them: a single one can be unlucky.
+        Over at least the last three refreshes: some are unlucky.
         """
-        if not self._factorised and len(self.history) > 2:
-            window = max(window, self.evaluations - self.history[-3][0])
+        if len(self.history) > 3:
+            window = max(window, self.evaluations - self.history[-4][0])
         earlier = [cost for spent, cost in self.history if spent <= self.evaluations - window]
         return 1.0 - self.best.cost / min(earlier) if earlier else None
 
@@ -107,6 +107,8 @@ class Run:
             self.current = self.best
             self._memory.clear()
             return
+        if new.cost > self.best.cost:
+            self._penalty = min(1.5 * self._penalty, LARGEST_PENALTY)
         self._carry_over(self.current, new)
         self.current = new
         if self.best.infeasibility > self._feasible or new.cost < self.best.cost:

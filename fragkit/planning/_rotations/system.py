@@ -55,20 +55,23 @@ def system_at(design: DesignMap, rotations: Array, coefficients: Array, scale: A
 
 
 class FactorisedSystem:
-    """N formed and factorised."""
+    """N formed and factorised, in double precision where single does not do."""
 
     def __init__(self, design: DesignMap, rotations: Array, coefficients: Array, scale: Array, lengths: Array) -> None:
         count, reduced, turns = len(rotations), scale.shape[-1], lengths.shape[1]
         self._shape = count, reduced, turns
         self._split = split = count * reduced
-        self._kind = working_precision(design.space.size)
-        self._matrix = np.empty((design.space.size, split + count * turns), dtype=self._kind, order="F")
-        for m, rotation in enumerate(rotations):
-            self._matrix[:, m * reduced : (m + 1) * reduced] = design.operators(rotation, scale[m])
-            columns = slice(split + m * turns, split + (m + 1) * turns)
-            self._matrix[:, columns] = design.turning(rotation, coefficients[m]) * lengths[m]
-        self._factor = Factor(self._matrix, design.shifts.basis)
-        self.singular = self._factor.singular
+        kinds = dict.fromkeys((working_precision(design.space.size), np.float64))
+        for self._kind in kinds:
+            self._matrix = np.empty((design.space.size, split + count * turns), dtype=self._kind, order="F")
+            for m, rotation in enumerate(rotations):
+                self._matrix[:, m * reduced : (m + 1) * reduced] = design.operators(rotation, scale[m])
+                columns = slice(split + m * turns, split + (m + 1) * turns)
+                self._matrix[:, columns] = design.turning(rotation, coefficients[m]) * lengths[m]
+            self._factor = Factor(self._matrix, design.shifts.basis)
+            self.singular = self._factor.singular
+            if not self.singular:
+                break
 
     def near(self, rotations: Array, coefficients: Array) -> "FactorisedSystem":
         """This one."""
