@@ -16,7 +16,6 @@ from fragkit.planning._operators.design_map import DesignMap
 from fragkit.planning._operators.fragment_sum import FragmentSum
 from fragkit.planning._rotations.covariances import Covariances, cayley
 from fragkit.planning._rotations.iterative import IterativeSystem
-from fragkit.planning._rotations.refresh import whitening
 from fragkit.planning._rotations.restore import restore
 from fragkit.planning._rotations.start import random_rotations
 from fragkit.planning._rotations.system import FactorisedSystem
@@ -46,7 +45,10 @@ def point(hamiltonian: Hamiltonian, count: int, seed: int = 0):
     rotations = random_rotations(count, n, rng)
     coefficients = 0.1 * rng.standard_normal((count, n * n + n))
     covariances = Covariances(noisy(hamiltonian), design, 0.0)
-    scale = np.stack([whitening(design, covariances, u)[0] for u in rotations]) * rng.uniform(0.3, 1, (count, 1, 1))
+    whiteners = np.stack([design.whitening(covariances.matrix(u))[0] for u in rotations])
+    scale = whiteners * rng.uniform(0.3, 1, (count, 1, 1))
+        0.3, 1, (count, 1, 1)
+    )
     return design, rotations, coefficients, scale, rng.uniform(0.3, 1.0, (count, n * (n - 1) // 2))
 
 

@@ -145,8 +145,9 @@ def exact_coefficients(
     space = OperatorSpace(n)
     if method == "newton" and not is_factorised(space.size):
         # The multiplicative iteration is slow at the end; the cost is settled long before its bound is.
+        whole = DesignMap(hamiltonian)
         weights = multiplicative_weights(
-            DesignMap(hamiltonian),
+            whole,
             rotations,
             checked,
             start=start,
@@ -154,7 +155,7 @@ def exact_coefficients(
             rounds=iterations,
             report=report,
         )
-        free, complete = _with_constants(hamiltonian, rotations, weights.coefficients, shifts)
+        free, complete = _with_constants(whole, hamiltonian, rotations, weights.coefficients, shifts)
         return _weighting(
             hamiltonian,
             rotations,
@@ -192,7 +193,7 @@ def given_coefficients(
 
     Nothing is known of how near they are to the least cost on these rotations: the lower bound is zero.
     """
-    free, complete = _with_constants(hamiltonian, rotations, coefficients, shifts)
+    free, complete = _with_constants(DesignMap(hamiltonian), hamiltonian, rotations, coefficients, shifts)
     zero = np.zeros(OperatorSpace(hamiltonian.orbitals).size)
     return _weighting(
         hamiltonian, rotations, complete, covariances, free, dual=zero, lower_bound=0.0, tolerance=1.0, iterations=0
@@ -200,12 +201,11 @@ def given_coefficients(
 
 
 def _with_constants(
-    hamiltonian: Hamiltonian, rotations: Array, coefficients: Array, shifts: bool
+    design: DesignMap, hamiltonian: Hamiltonian, rotations: Array, coefficients: Array, shifts: bool
 ) -> tuple[Shifts, Array]:
     """The shifts allowed, and coefficients that are exact up to these and no longer up to other constants."""
-    design = DesignMap(hamiltonian)
     space = design.space
-    free = sector_shifts(space, hamiltonian.electrons) if shifts else no_shifts(space)
+    free = design.sector_shifts if shifts else no_shifts(space)
     left = space.hamiltonian_rows(hamiltonian) - space.apply(space.pair_columns(rotations), rotations, coefficients)
     return free, coefficients + constants_for(design, rotations, left, free)
 

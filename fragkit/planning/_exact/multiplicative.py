@@ -10,7 +10,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import lstsq, solve_triangular
+from scipy.linalg import lstsq
 
 from fragkit.core import InputError
 from fragkit.planning._operators.conjugate_gradients import least_variance
@@ -61,13 +61,12 @@ def multiplicative_weights(
     whiteners = np.empty((count, *design.features.shape))
     for m, covariance in enumerate(covariances):
         try:
-            lower = np.linalg.cholesky(design.features.T @ covariance @ design.features)
+            whiteners[m] = design.whitening(covariance)[0]
         except np.linalg.LinAlgError:
             raise InputError(
                 f"`covariances` must be positive definite for {design.orbitals} orbitals (got a singular one for "
                 f"rotation {m}); mix noise into the state, with planning_noise or `with_noise`"
             ) from None
-        whiteners[m] = solve_triangular(lower, design.features.T, lower=True, check_finite=False).T
     weights = np.full(count, 1.0 / count) if start is None else np.maximum(start / np.sum(start), 1e-4 / count)
     best: IterativeWeights | None = None
     dual: Array | None = None

@@ -6,6 +6,7 @@ from numpy.typing import NDArray
 from fragkit.core import Hamiltonian
 from fragkit.planning._operators.design_map import DesignMap
 from fragkit.planning._operators.fragment_sum import FragmentSum
+from fragkit.planning._rotations.covariances import cayley
 from fragkit.states import ReferenceState
 
 Array = NDArray[np.float64]
@@ -93,10 +94,9 @@ class PhiSearch:
         """U exp(X) to second order, exactly orthogonal (Cayley)."""
         n = rotations.shape[-1]
         p, q = self._strict
-        half = np.zeros((len(steps), n, n))
-        half[:, p, q] = 0.5 * steps
-        half -= half.transpose(0, 2, 1)
-        return rotations @ np.linalg.solve(np.eye(n) - half, np.eye(n) + half)
+        generators = np.zeros((len(steps), n, n))
+        generators[:, p, q] = steps
+        return cayley(rotations, generators - generators.transpose(0, 2, 1))
 
     def _covariances(self, rotations: Array) -> Array:
         features = self.map.features

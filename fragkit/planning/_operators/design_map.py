@@ -5,6 +5,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.linalg import solve_triangular
 
 from fragkit.core import Hamiltonian, pair_indices, unpack_features
 from fragkit.planning._operators.fragment_sum import FragmentSum
@@ -43,6 +44,7 @@ class DesignMap:
     `target` are the Hamiltonian's rows. `features` (F, F') is a basis of the combinations of features that are not
     constant in the sector, scaled to unit covariance in the maximally mixed state, whose covariance is `mixed`;
     `features_inverse` (F', F) is its pseudo-inverse, and `constants` a basis of the rest.
+    `shifts` are the `sector_shifts` with the operators of the constants where these are more.
     """
 
     def __init__(self, hamiltonian: Hamiltonian) -> None:
@@ -54,13 +56,23 @@ class DesignMap:
         self.features = vectors[:, keep] / np.sqrt(values[keep])
         self.features_inverse = np.sqrt(values[keep])[:, None] * vectors[:, keep].T
         self.constants = vectors[:, ~keep]
-        self.shifts = _completed(self.space, sector_shifts(self.space, hamiltonian.electrons), self.constants)
+        self.sector_shifts = sector_shifts(self.space, hamiltonian.electrons)
+        self.shifts = _completed(self.space, self.sector_shifts, self.constants)
         self.target = self.shifts.project(self.space.hamiltonian_rows(hamiltonian))
 
     @property
     def rows(self) -> int:
         """Independent rows, without the shifts."""
         return self.space.size - self.shifts.basis.shape[1]
+
+    def whitening(self, covariance: Array) -> tuple[Array, Array]:
+        """(F, F') combinations of features of unit variance for a covariance (F, F), and (F', F) the map back to them.
+
+        Raises `numpy.linalg.LinAlgError` if it is singular apart from the constants.
+        """
+        lower = np.asarray(np.linalg.cholesky(self.features.T @ covariance @ self.features), dtype=np.float64)
+        whitener = solve_triangular(lower, self.features.T, lower=True, check_finite=False).T
+        return whitener, lower.T @ self.features_inverse
 
     def evaluate(self, rotations: Array, coefficients: Array, dual_of: Callable[[Array], Array]) -> MapResult:
         """The residual of rotations (K, n, n) with coefficients (K, F), and Aᵀ and gradient for a dual made from it."""

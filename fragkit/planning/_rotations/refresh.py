@@ -6,7 +6,6 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import solve_triangular
 
 from fragkit.core import InputError
 from fragkit.planning._operators.design_map import DesignMap
@@ -79,7 +78,7 @@ def settle(
         If these rotations cannot reproduce the Hamiltonian.
     """
     count, size, reduced = len(rotations), design.space.size, design.features.shape[1]
-    whiteners = np.stack([whitening(design, covariances, rotation)[0] for rotation in rotations])
+    whiteners = np.stack([design.whitening(covariances.matrix(rotation))[0] for rotation in rotations])
     kind = working_precision(size)
     blocks = np.empty((size, count * reduced), dtype=kind, order="F")
     for m, rotation in enumerate(rotations):
@@ -105,14 +104,6 @@ def settle(
     deviations = np.sqrt(np.maximum(covariances.evaluate(rotations, coefficients)[0], 0.0))
     total = float(deviations.sum())
     return Settled(coefficients, deviations / total, total**2, left)
-
-
-def whitening(design: DesignMap, covariances: Covariances, rotation: Array) -> tuple[Array, Array]:
-    """(F, F') combinations of features of unit covariance in one rotated basis, and (F', F) the map back to them."""
-    covariance = design.features.T @ covariances.matrix(rotation) @ design.features
-    lower = np.asarray(np.linalg.cholesky(covariance), dtype=np.float64)
-    whitener = solve_triangular(lower, design.features.T, lower=True, check_finite=False).T
-    return whitener, lower.T @ design.features_inverse
 
 
 def _refined(

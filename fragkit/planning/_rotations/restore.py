@@ -14,7 +14,7 @@ from fragkit.planning._operators.conjugate_gradients import least_variance
 from fragkit.planning._operators.design_map import DesignMap
 from fragkit.planning._operators.factor import is_factorised
 from fragkit.planning._rotations.covariances import Covariances, cayley, variance_curvature
-from fragkit.planning._rotations.refresh import Refresh, whitening
+from fragkit.planning._rotations.refresh import Refresh
 from fragkit.planning._rotations.system import system_at
 
 Array = NDArray[np.float64]
@@ -53,7 +53,7 @@ def restore(
     for _ in range(iterations):
         used, lengths = _lengths(covariances, rotations, coefficients)
         for m, rotation in enumerate(rotations):
-            whitener, back = whitening(design, covariances, rotation)
+            whitener, back = design.whitening(covariances.matrix(rotation))
             scale[m], unscale[m] = np.sqrt(used[m]) * whitener, back / np.sqrt(used[m])
         system = system_at(design, rotations, coefficients, scale, lengths)
         if system.singular:
