@@ -47,8 +47,6 @@ def point(hamiltonian: Hamiltonian, count: int, seed: int = 0):
     covariances = Covariances(noisy(hamiltonian), design, 0.0)
     whiteners = np.stack([design.whitening(covariances.matrix(u))[0] for u in rotations])
     scale = whiteners * rng.uniform(0.3, 1, (count, 1, 1))
-        0.3, 1, (count, 1, 1)
-    )
     return design, rotations, coefficients, scale, rng.uniform(0.3, 1.0, (count, n * (n - 1) // 2))
 
 
